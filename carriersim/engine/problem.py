@@ -1,0 +1,295 @@
+"""Scenario -> Problem: the flat arrays that the kernels read, and what turns counts into results.
+
+The only module that knows both the scenario's keys and the kernel's arrays.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from carriersim import fermi
+from carriersim.constants import BOLTZMANN_MEV_PER_K
+from carriersim.engine.energies import Bins, Window, axis, shares
+from carriersim.engine.flights import Geometry, Spectrum
+from carriersim.quantities import EnergyTable
+
+
+@dataclass(frozen=True)
+class Path:
+    """One named backscattering path of a section: number or table in nm."""
+
+    name: str
+    value: float | EnergyTable
+
+    def rate_per_nm(self, energy_meV):
+        """1/lam at the given energies."""
+        if isinstance(self.value, EnergyTable):
+            return 1.0 / at_energy(self.value, energy_meV)
+        return np.full(np.shape(energy_meV), 1.0 / self.value)
+
+
+@dataclass(frozen=True)
+class Functionals:
+    """Weights c, shape (B,): a result is c @ (bin averages of a response). Units in brackets."""
+
+    current: np.ndarray  # M (F_L - F_R) [meV]
+    bias_slope: np.ndarray  # M (-dF_L/dE) [1]
+    heat: np.ndarray  # M E (F_L - F_R) [meV^2]
+    filling: np.ndarray  # gives mu in meV, or per unit of the bias when the bias is 0
+    number: np.ndarray  # F_L - F_R [meV]
+    energy: np.ndarray | None  # E (F_L - F_R) [meV^2]; None where modes depend on energy
+    thermal: tuple[np.ndarray, np.ndarray, np.ndarray]  # M E^n (-dF/dE), n = 0, 1, 2
+    mean_modes: float  # averaged over the energies that carry the current
+
+
+@dataclass(frozen=True)
+class Problem:
+    """Everything a run needs, built once. K nodes, K-1 segments, C cells, B energy bins."""
+
+    scenario: object
+    window: Window
+    geometry: Geometry
+    spectrum: Spectrum | None
+    bins: Bins | None
+    share: np.ndarray  # (B,)
+    functionals: Functionals
+    nodes_nm: np.ndarray  # (K,)
+    cell_edges_nm: np.ndarray  # (C+1,)
+    segment_paths: tuple[tuple[Path, ...], ...]
+    is_scatterer: np.ndarray  # (K,) bool: a point scatterer or an interface that can reflect
+    is_section_edge: np.ndarray  # (K,) bool
+    probe_node: np.ndarray  # (probes,) int64
+    transparent: bool  # nothing can turn a carrier back
+
+    @property
+    def cells(self):
+        return self.cell_edges_nm.size - 1
+
+    def modes(self, energy_meV):
+        """M at the given energies."""
+        return modes_at(self.scenario, energy_meV)
+
+
+def at_energy(value, energy_meV):
+    """A number or an EnergyTable (linear, clamped at its ends) at the given energies."""
+    if isinstance(value, EnergyTable):
+        return np.interp(energy_meV, value.energy_meV, value.value)
+    return np.full(np.shape(energy_meV), float(value))
+
+
+def modes_at(scenario, energy_meV):
+    """M at the given energies."""
+    return at_energy(scenario.channel.modes, energy_meV)
+
+
+def build(scenario):
+    """The Problem of a validated scenario whose random scatterers have been drawn."""
+    window = Window(
+        scenario.contacts.bias_mV, scenario.left_temperature_K, scenario.right_temperature_K
+    )
+    nodes, transmissions = _nodes(scenario)
+    paths = [_paths_at(scenario, 0.5 * (a + b)) for a, b in zip(nodes, nodes[1:], strict=False)]
+    length = np.diff(nodes)
+    cells = np.maximum(1, np.rint(length / nodes[-1] * scenario.simulation.cells)).astype(np.int64)
+    edges = [np.linspace(a, b, n + 1)[1:] for a, b, n in zip(nodes, nodes[1:], cells, strict=False)]
+    constant = np.array([sum(1 / p.value for p in row if not _varies(p.value)) for row in paths])
+    geometry = Geometry(
+        thickness=length * constant,
+        first_cell=np.concatenate([[0], np.cumsum(cells)[:-1]]).astype(np.int64),
+        cells=cells,
+        transmission=np.array([1.0 if _varies(t) else float(t) for t in transmissions]),
+    )
+    tables = _distinct([*transmissions, *(p.value for row in paths for p in row)])
+    modes = scenario.channel.modes
+    mode_tables = [modes] if _varies(modes) else []
+    bins = spectrum = None
+    share = np.ones(1)
+    if tables or mode_tables:
+        edges_meV = axis(window, [*tables, *mode_tables], scenario.simulation.energy_bins)
+        bins = Bins(edges_meV, window.breaks())
+        functionals = _binned_functionals(scenario, window, bins)
+        share = _share(bins, functionals, window)
+        spectrum = _spectrum(bins, share, transmissions, paths, tables, length)
+    else:
+        functionals = _constant_functionals(float(modes), window)
+    return Problem(
+        scenario=scenario,
+        window=window,
+        geometry=geometry,
+        spectrum=spectrum,
+        bins=bins,
+        share=share,
+        functionals=functionals,
+        nodes_nm=nodes,
+        cell_edges_nm=np.concatenate([[0.0], *edges]),
+        segment_paths=tuple(tuple(row) for row in paths),
+        is_scatterer=np.array([_varies(t) or t < 1.0 for t in transmissions]),
+        is_section_edge=np.isin(nodes, _section_edges(scenario)),
+        probe_node=np.searchsorted(nodes, [p.position_nm for p in scenario.probes]),
+        transparent=not any(paths) and all(not _varies(t) and t == 1.0 for t in transmissions),
+    )
+
+
+def _varies(value):
+    return isinstance(value, EnergyTable)
+
+
+def _section_edges(scenario):
+    inside = []
+    for section in scenario.scattering.sections:
+        inside += [section.from_nm, section.to_nm]
+    return [x for x in inside if 0.0 < x < scenario.channel.length_nm]
+
+
+def _nodes(scenario):
+    """Positions of all nodes, increasing, and the transmission of each."""
+    length = scenario.channel.length_nm
+    contacts = scenario.contacts
+    by_place = {p.position_nm: p.transmission for p in scenario.scattering.points}
+    for place in [*_section_edges(scenario), *(p.position_nm for p in scenario.probes)]:
+        by_place.setdefault(place, 1.0)
+    places = sorted(by_place)
+    nodes = np.array([0.0, *places, length])
+    inner = [by_place[place] for place in places]
+    return nodes, [contacts.left.transmission, *inner, contacts.right.transmission]
+
+
+def _paths_at(scenario, place_nm):
+    """The backscattering paths in force at a place, lam = 2 l in one dimension."""
+    level = scenario.scattering
+    for section in scenario.scattering.sections:
+        if section.from_nm <= place_nm <= section.to_nm:
+            level = section
+    return backscatter_paths(level)
+
+
+def backscatter_paths(level):
+    """Paths of one level (the whole channel, a section): a list of Path, empty = ballistic."""
+    named = level.backscatter_path_nm
+    factor = 1.0
+    if named is None:
+        named, factor = level.mean_free_path_nm, 2.0
+    if named is None:
+        return []
+    if isinstance(named, tuple):
+        return [
+            Path(item.name, _scaled(item.mean_free_path_nm, 2.0))
+            if item.backscatter_path_nm is None
+            else Path(item.name, item.backscatter_path_nm)
+            for item in named
+        ]
+    return [Path("elastic", _scaled(named, factor))]
+
+
+def _scaled(value, factor):
+    if _varies(value):
+        return EnergyTable(
+            energy_meV=value.energy_meV, value=tuple(factor * v for v in value.value)
+        )
+    return factor * value
+
+
+def _distinct(values):
+    """The different tables among the values, in order of first use."""
+    seen = {}
+    for value in values:
+        if _varies(value):
+            seen.setdefault((value.energy_meV, value.value), value)
+    return list(seen.values())
+
+
+def _spectrum(bins, share, transmissions, paths, tables, length_nm):
+    """The kernel's view of everything that depends on energy."""
+    place = {(t.energy_meV, t.value): i for i, t in enumerate(tables)}
+
+    def index(value):
+        return place[(value.energy_meV, value.value)] if _varies(value) else -1
+
+    values = np.empty((bins.count, max(len(tables), 1), 2))
+    values[:] = [1.0, 0.0]
+    for i, table in enumerate(tables):
+        at_edges = at_energy(table, bins.edges)
+        values[:, i, 0] = 0.5 * (at_edges[1:] + at_edges[:-1])
+        values[:, i, 1] = np.diff(at_edges) / np.diff(bins.edges)
+    used = [[index(p.value) for p in row if _varies(p.value)] for row in paths]
+    return Spectrum(
+        edges_meV=bins.edges,
+        cumulative=np.concatenate([[0.0], np.cumsum(share)[:-1], [1.0]]),
+        node_table=np.array([index(t) for t in transmissions], np.int64),
+        path_first=np.concatenate([[0], np.cumsum([len(u) for u in used])]).astype(np.int64),
+        path_index=np.array([i for row in used for i in row], np.int64),
+        values=values,
+        length_nm=length_nm,
+    )
+
+
+def _constant_functionals(modes, window):
+    """The integrals in closed form where neither transmission, path nor modes depend on energy."""
+    k = BOLTZMANN_MEV_PER_K
+    mu = window.mu_left_meV
+    # int E (F_L - F_R) dE: Sommerfeld's two terms, exact for Fermi functions.
+    heat = mu**2 / 2 + np.pi**2 / 6 * k**2 * (
+        window.temperature_left_K**2 - window.temperature_right_K**2
+    )
+    second = np.pi**2 / 3 * (k * window.mean_temperature_K) ** 2
+    one = np.ones(1)
+    return Functionals(
+        current=modes * mu * one,
+        bias_slope=modes * one,
+        heat=modes * heat * one,
+        filling=one if window.linear else mu * one,
+        number=mu * one,
+        energy=heat * one,
+        thermal=(modes * one, 0.0 * one, modes * second * one),
+        mean_modes=modes,
+    )
+
+
+def _binned_functionals(scenario, window, bins):
+    """The same integrals over the bins."""
+
+    def modes(energy):
+        return modes_at(scenario, energy)
+
+    left = window.mu_left_meV, window.temperature_left_K
+    current = bins.functional(lambda e: modes(e) * window.difference(e))
+    slope = bins.slope_functional(*left, modes)
+    constant = scenario.channel.modes
+    if not _varies(constant):
+        # The axis ends at REACH_KT: what lies beyond (some 1e-9) is known here, so it is put back.
+        slope *= constant / slope.sum()
+        if window.same_temperature and not window.linear:
+            current *= constant * window.mu_left_meV / current.sum()
+        mean_modes = constant
+    elif window.linear:
+        mean_modes = slope.sum()
+    elif window.same_temperature:
+        mean_modes = current.sum() / window.mu_left_meV
+    else:  # the window of the bias has no sign of its own: the right contact's modes
+        mean_modes = bins.slope_functional(0.0, window.temperature_right_K, modes).sum()
+    filling = (slope if window.linear else current) / mean_modes
+    return Functionals(
+        current=current,
+        bias_slope=slope,
+        heat=bins.functional(lambda e: e * modes(e) * window.difference(e)),
+        filling=filling,
+        number=bins.functional(window.difference),
+        energy=None
+        if _varies(scenario.channel.modes)
+        else bins.functional(lambda e: e * window.difference(e)),
+        thermal=tuple(
+            bins.slope_functional(0.0, window.mean_temperature_K, modes, power=n) for n in range(3)
+        ),
+        mean_modes=float(mean_modes),
+    )
+
+
+def _share(bins, functionals, window):
+    """Share of histories per bin: the drive of the current first, then what the rest needs."""
+    main = functionals.bias_slope if window.linear else functionals.current
+    return shares(bins, [main, main, functionals.bias_slope, functionals.thermal[2]])
+
+
+def equilibrium_right(problem, energy_meV):
+    """F_R on given energies; the reference that deviations are counted from."""
+    return fermi.occupation(energy_meV, 0.0, problem.window.temperature_right_K)
