@@ -1,0 +1,303 @@
+"""What a user reads in the terminal."""
+
+import dataclasses
+import io
+import math
+
+import pytest
+from rich.console import Console
+
+from carriersim import limits, report
+from carriersim.formatting import (
+    ascii_text,
+    format_count,
+    format_number,
+    format_scaled,
+    format_seconds,
+    format_share,
+    split_parts,
+)
+from carriersim.report import format_estimate, print_limits, print_result
+from carriersim.result import Estimate, LimitRow, Part
+from tests.fake_results import fake_result, limit_row
+
+
+def printed(result, width=80, encoding="utf-8"):
+    raw = io.BytesIO()
+    stream = io.TextIOWrapper(raw, encoding=encoding)
+    print_result(result, Console(file=stream, width=width))
+    stream.flush()
+    return raw.getvalue().decode(encoding)
+
+
+@pytest.mark.parametrize(
+    ("value", "error", "text"),
+    [
+        (12.906, 0.021, "12.906 ± 0.021 kΩ"),
+        (12.90649, 0.0209, "12.906 ± 0.021 kΩ"),
+        (12906.4, 2100.0, "12900 ± 2100 kΩ"),
+        (12.9, 0.0996, "12.90 ± 0.10 kΩ"),
+        (-3.14159, 0.25, "-3.14 ± 0.25 kΩ"),
+        (0.0, 0.1, "0.00 ± 0.10 kΩ"),
+        (-0.0001, 0.2, "0.00 ± 0.20 kΩ"),
+        (1.0, 50.0, "1 ± 50 kΩ"),
+        (5.0, 0.0, "5 ± 0 kΩ"),
+        (1.0, 1e-18, "1.000000000 ± 1.0e-18 kΩ"),
+        (3e8, 1e5, "(3.0000 ± 0.0010)e+08 kΩ"),
+        (1.5e-12, 2e-15, "(1.5000 ± 0.0020)e-12 kΩ"),
+        (5e-320, 1e-321, "(5.00 ± 0.10)e-320 kΩ"),
+        (5.0, math.nan, "5 ± n/a kΩ"),
+        (5.0, None, "5 ± n/a kΩ"),
+        (5.0, math.inf, "5 ± infinite kΩ"),
+        (math.nan, 1.0, "n/a"),
+        (-math.inf, 1.0, "-infinite kΩ"),
+    ],
+)
+def test_estimates(value, error, text):
+    assert format_estimate(value, error, "kΩ") == text
+
+
+def test_an_estimate_without_unit():
+    assert format_estimate(0.2, 0.001) == "0.2000 ± 0.0010"
+
+
+@pytest.mark.parametrize(
+    ("value", "error", "unit", "text"),
+    [
+        (12906.4, 21.0, "Ω", "12.906 ± 0.021 kΩ"),
+        (1.5e-6, 1e-9, "A", "1.5000 ± 0.0010 µA"),
+        (3.2e7, None, "Ω", "32 MΩ"),
+        (0.0, 0.0, "W", "0 ± 0 W"),
+        (0.0, 2e-9, "W", "0.0 ± 2.0 nW"),
+        (6453.2, 1e-11, "Ω", "6.4532 ± 0 kΩ"),
+        (999.9999, 0.5, "Ω", "1.00000 ± 0.00050 kΩ"),
+    ],
+)
+def test_scaled_estimates(value, error, unit, text):
+    assert format_scaled(value, error, unit) == text
+
+
+def test_other_texts():
+    assert format_number(1.40000001) == "1.4"
+    assert format_number(123456789.0) == "1.23457e+08"
+    assert format_count(950) == "950"
+    assert format_count(12_345) == "12.3 thousand"
+    assert format_count(1_280_000) == "1.28 million"
+    assert format_count(9.9996e8) == "1 billion"
+    assert format_seconds(0.4213) == "0.42 s"
+    assert format_seconds(200) == "3 min 20 s"
+    assert format_seconds(7500) == "2 h 05 min"
+    assert format_share(1, 4) == "25.0 %"
+    assert format_share(1, 1e6) == "< 0.1 %"
+    assert ascii_text("12.9 ± 0.1 kΩ, 3 µm, Büttiker, μ₊ – 東") == (
+        "12.9 +- 0.1 kohm, 3 um, Buttiker, mu+ - ?"
+    )
+
+
+def test_the_main_numbers_are_there():
+    text = printed(fake_result(seed=3))
+    assert text.startswith("one defect: bias 20 mV, 300 K; 1.28 million histories in 0.42 s;")
+    for word in ("current", "resistance", "conductance", "transmission", " nA", " kΩ", " Ω"):
+        assert word in text
+    assert "0.3 %" in text
+
+
+@pytest.mark.parametrize("width", [20, 40, 59, 60, 80, 99, 100, 140, 300])
+@pytest.mark.parametrize("encoding", ["utf-8", "ascii", "latin-1"])
+def test_lines_fit_any_width_without_escape_codes(width, encoding):
+    changes = {"probes": [{"position_nm": 20}, {"position_nm": 80}]}
+    text = printed(fake_result(changes=changes), width, encoding)
+    assert "\x1b" not in text
+    if width >= 40:
+        assert max(map(len, text.splitlines())) <= width
+    if encoding != "utf-8":
+        assert text.isascii()
+        assert "kohm" in text
+
+
+def test_numbers_are_never_broken_over_lines():
+    for width in (40, 60, 80):
+        lines = printed(fake_result(), width).splitlines()
+        assert any("19.436 ± 0.058 kΩ  47.3 %" in line.replace("   ", "  ") for line in lines)
+
+
+def test_brackets_in_names_are_not_markup():
+    result = fake_result(changes={"name": "[red]a[/red] :smile: [x"})
+    assert printed(result).startswith("[red]a[/red] :smile: [x: bias")
+
+
+def test_sources_appear_only_where_there_is_room():
+    assert "Büttiker" not in printed(fake_result(), 99)
+    wide = printed(fake_result(), 100)
+    assert wide.count("Büttiker 1986") == 1
+    assert "[1]" in wide
+
+
+def test_many_parts_are_summed():
+    places = [{"position_nm": float(i + 1), "transmission": 0.9} for i in range(60)]
+    text = printed(fake_result(changes={"scattering.points": places}))
+    block = text.partition("Where the resistance sits")[2].partition("\n\n")[0]
+    assert len(block.splitlines()) == 2 + 10 + 1
+    assert block.splitlines()[-1].startswith("the other ")
+
+
+def test_split_parts_keeps_order_and_drops_nothing_that_counts():
+    parts = [Part(str(i), "point", Estimate(float(i), 0.1), position_nm=i) for i in range(8)]
+    parts[0] = dataclasses.replace(parts[0], resistance_ohm=Estimate(0.0, 0.0))
+    shown, rest = split_parts(parts, 7, 3)
+    assert [part.name for part in shown] == list("1234567")
+    assert rest == []
+    shown, rest = split_parts(parts, 6, 3)
+    assert [part.name for part in shown] == list("567")
+    assert [part.name for part in rest] == list("1234")
+
+
+def test_missing_quantities_are_told_once():
+    changes = {"contacts.left.temperature_K": 320, "contacts.temperature_K": 280}
+    text = " ".join(printed(fake_result(changes=changes)).split())
+    reason = "the contacts have different temperatures"
+    assert text.count(reason) == 1
+    assert f"resistance_ohm, breakdown, transmission: {reason}" in text
+    assert "320 K left and 280 K right" in text
+    assert "heat current out of the left contact" in text
+    assert "noise" not in text
+
+
+def test_linear_response():
+    changes = {"contacts.bias_mV": 0, "probes": [{"position_nm": 20}]}
+    text = printed(fake_result(changes=changes))
+    assert "linear response" in text
+    assert " of the bias" in text
+    assert "current " not in text.partition("Without a value")[0].replace("heat current", "")
+
+
+def test_caution_only_beside_heat_or_current():
+    caution = "not a design rating"
+    result = fake_result()
+    assert " ".join(printed(result).split()).count(caution) == 1
+    bare = dataclasses.replace(
+        result, current_A=None, heat_W=None,
+        thermal=type(result.thermal)(None, None, None, None),
+    )  # fmt: skip
+    assert caution not in " ".join(printed(bare).split())
+
+
+def test_unfinished_runs_say_so():
+    result = fake_result(converged=False, stopped_by="max_seconds")
+    text = printed(result, 100)
+    assert "time limit reached" in text
+    assert "Not converged: the asked error was not reached." in text
+    assert "residual 0.02" in printed(dataclasses.replace(result, residual=0.02))
+
+
+def test_differential_resistance_only_if_it_differs():
+    result = fake_result()
+    same = dataclasses.replace(result, differential_resistance_ohm=result.resistance_ohm)
+    assert "differential" not in printed(same)
+    other = dataclasses.replace(result, differential_resistance_ohm=Estimate(1e3, 5.0))
+    assert "differential resistance" in printed(other)
+
+
+def test_missing_errors_and_values():
+    result = fake_result(
+        resistance_ohm=Estimate(2e4, None), conductance_S=Estimate(0.0, 0.0, 1e-7),
+        differential_resistance_ohm=None, four_point=None,
+        limits=(LimitRow("a", "b.resistance_ohm", 1.0, None, None, None, "s", "exact"),),
+    )  # fmt: skip
+    text = printed(result)
+    assert "20 ± n/a kΩ" in text
+    assert "20000 ± n/a Ω" in text
+    assert "bias up to 100 nS" in text
+
+
+@pytest.mark.parametrize(
+    ("quantity", "unit"),
+    [
+        ("resistance_ohm", "Ω"),
+        ("breakdown.resistance_ohm", "Ω"),
+        ("probes[0].potential_mV", "mV"),
+        ("probes[0].potential per unit of the bias", ""),
+        ("heat_W.left_contact", "W"),
+        ("thermal.seebeck_V_per_K", "V/K"),
+        ("thermal.conductance_W_per_K", "W/K"),
+        ("thermal.conductance_W_per_K / (conductance_S * T), W ohm/K^2", "W Ω/K²"),
+        ("transmission", ""),
+    ],
+)
+def test_units_of_limits(quantity, unit):
+    assert report._unit(quantity) == unit
+
+
+def test_far_from_an_exact_form_is_marked():
+    row = LimitRow("a", "transmission", 0.2, 0.3, 0.01, 10.0, "s", "exact")
+    text = printed(fake_result(limits=(row,)))
+    assert "+10.0 !" in text
+    assert "! more than 4 standard errors" in text
+    rough = dataclasses.replace(row, holds="approximate")
+    assert "!" not in printed(fake_result(limits=(rough,)))
+
+
+def test_a_long_list_of_limits_is_cut():
+    import numpy as np
+
+    rng = np.random.default_rng(0)
+    rows = tuple(limit_row(f"row {i}", "transmission", 0.2, 0.01, rng) for i in range(60))
+    assert "and 20 more in summary.json" in printed(fake_result(limits=rows))
+
+
+@pytest.mark.parametrize("width", [40, 80, 140])
+def test_print_limits(width):
+    scenario = fake_result().scenario
+    stream = io.StringIO()
+    print_limits(scenario, limits.limits_for(scenario), Console(file=stream, width=width))
+    text = stream.getvalue()
+    assert text.startswith("one defect: bias 20 mV, 300 K")
+    assert "12.9064 kΩ" in text
+    assert "[1] Landauer 1957" in text
+    assert "approx." in text or "exact" in text
+    assert max(map(len, text.splitlines())) <= width
+
+
+def test_print_no_limits():
+    stream = io.StringIO()
+    print_limits(fake_result().scenario, (), Console(file=stream))
+    assert "No closed form applies." in stream.getvalue()
+
+
+def test_progress_is_silent_unless_watched(monkeypatch):
+    stream = io.StringIO()
+    progress = report.progress(Console(file=stream))
+    assert isinstance(progress, report.NoProgress)
+    progress.start(0.01)
+    progress.update(1000, 0.05, 0.01, 1.0)
+    progress.stop()
+    assert stream.getvalue() == ""
+
+
+def test_progress_is_one_line(monkeypatch):
+    clock = iter(range(1000))
+    monkeypatch.setattr(report.time, "monotonic", lambda: float(next(clock)))
+    stream = io.StringIO()
+    console = Console(file=stream, force_terminal=True, width=80, legacy_windows=False)
+    progress = report.progress(console)
+    progress.start(0.005)
+    for i in range(1, 6):
+        progress.update(100_000 * i, 0.02 / i, 0.005, 0.5 * i)
+    assert "500 thousand" in stream.getvalue()
+    progress.stop()
+    progress.stop()
+    text = stream.getvalue()
+    assert text.replace("\x1b", "").count("\n") <= 1
+    assert text.endswith(("\x1b[2K", "\x1b[?25h"))
+
+
+def test_progress_waits_a_moment_and_survives_odd_numbers(monkeypatch):
+    stream = io.StringIO()
+    progress = report.Progress(Console(file=stream, force_terminal=True))
+    progress.start(None)
+    progress.update(10, math.inf, None, 0.1)
+    assert stream.getvalue() == ""
+    for error in (None, math.nan, math.inf, 0.0):
+        assert report._progress_text(10, error, 0.01, 1.0) == "10 histories, 1 s"
+    text = report._progress_text(1e6, 0.02, 0.01, 3.0)
+    assert text == "1 million histories, 3 s; R ± 2 %, asked 1 %; about 9 s more"
