@@ -1,6 +1,24 @@
-"""What a carrier meets: the chance to pass a node, the optical thickness of a segment."""
+"""What a carrier meets: its energy, the chance to pass a node, the thickness of a segment."""
 
+import numpy as np
 from numba import njit
+
+GOLDEN = np.uint64(0x9E3779B97F4A7C15)  # 2**64 / golden ratio
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def draw_energy(history, offset, spectrum):
+    """Energy of a history: its bin, and meV from the bin's centre.
+
+    The additive (Kronecker) sequence of the golden ratio, shifted at random for each batch, spreads
+    any number of histories evenly over the shares of the bins.
+    """
+    quantile = np.float64(offset + np.uint64(history) * GOLDEN) * 2.0**-64
+    b = np.searchsorted(spectrum.cumulative, quantile, side="right") - 1
+    b = min(max(b, 0), spectrum.cumulative.size - 2)
+    low = spectrum.cumulative[b]
+    part = (quantile - low) / (spectrum.cumulative[b + 1] - low)
+    return b, (part - 0.5) * (spectrum.edges_meV[b + 1] - spectrum.edges_meV[b])
 
 
 @njit(cache=True, inline="always", error_model="numpy")

@@ -15,12 +15,10 @@ from typing import NamedTuple
 import numpy as np
 from numba import njit
 
-from carriersim.engine.events import optical_thickness, passes
+from carriersim.engine.events import draw_energy, optical_thickness, passes
 from carriersim.engine.streams import BLOCK, fill_exponentials, fill_uniforms
 
 DONE, STOPPED, TOO_MANY_EVENTS = 0, 1, 2
-
-GOLDEN = np.uint64(0x9E3779B97F4A7C15)  # 2**64 / golden ratio: the additive (Kronecker) sequence
 
 
 class Geometry(NamedTuple):
@@ -63,7 +61,10 @@ class Counts(NamedTuple):
     turns: np.ndarray  # (B, cells, 2): signed number of turns, and sum of their place in the cell
     arrivals: np.ndarray  # (B, K, 2): arrivals at each node from the left and from the right
     transmitted: np.ndarray  # (B,) histories that reached the right contact
-    work: np.ndarray  # (2,) int64: turns, status detail (index of the history)
+    work: np.ndarray  # (3,) int64, see the indices below
+
+
+TURNS, HISTORY, BUDGET = 0, 1, 2  # turns made; the history under way, the numbers it may still use
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -72,108 +73,99 @@ def fly(first, histories, offset, geometry, spectrum, stream, counts, stop, even
 
     first: index of the first history of this call in its batch; offset: uint64 shift of the
     batch's energy sequence; spectrum: None when nothing depends on energy; stop: (1,) uint8, a
-    non-zero value ends the call early. Returns DONE, STOPPED or TOO_MANY_EVENTS; after anything
-    but DONE the counts are not usable.
+    non-zero value ends the call early; event_limit: random numbers that one history may use.
+    Returns DONE, STOPPED or TOO_MANY_EVENTS; after anything but DONE the counts are not usable.
     """
+    # Arrays are taken out of their groups here, and the loop over flights is not a function of its
+    # own: handing arrays on counts references, which halves the speed.
+    work, turns, arrivals, transmitted = (
+        counts.work,
+        counts.turns,
+        counts.arrivals,
+        counts.transmitted,
+    )
     lanes, exponentials, uniforms = stream.lanes, stream.exponentials, stream.uniforms
     first_cell, cells = geometry.first_cell, geometry.cells
-    turns, arrivals, transmitted = counts.turns, counts.arrivals, counts.transmitted
     last = geometry.transmission.size - 1
-    p = stream.position[0]
-    q = stream.position[1]
-    tau = stream.flight[0]
-    drawn = -p
-    spent = 0
-    b = 0
-    energy = 0.0
+    p, q, tau = stream.position[0], stream.position[1], stream.flight[0]
+    work[TURNS] -= p
+    b, energy = 0, 0.0
     for history in range(first, first + histories):
-        allowed = spent + event_limit
+        work[HISTORY] = history
+        work[BUDGET] = event_limit
         if spectrum is not None:
-            quantile = np.float64(offset + np.uint64(history) * GOLDEN) * 2.0**-64
-            b = np.searchsorted(spectrum.cumulative, quantile, side="right") - 1
-            b = min(max(b, 0), spectrum.cumulative.size - 2)
-            low = spectrum.cumulative[b]
-            part = (quantile - low) / (spectrum.cumulative[b + 1] - low)
-            energy = (part - 0.5) * (spectrum.edges_meV[b + 1] - spectrum.edges_meV[b])
-        node = 0
-        rightward = True
+            b, energy = draw_energy(history, offset, spectrum)
+        node, rightward = 0, True
         while True:
             # At a node: pass on, turn back, or leave the channel.
-            if rightward:
-                arrivals[b, node, 0] += 1.0
-            else:
-                arrivals[b, node, 1] += 1.0
+            arrivals[b, node, 0 if rightward else 1] += 1.0
             chance = passes(node, b, energy, geometry, spectrum)
             if chance < 1.0:
                 if q == BLOCK:
-                    spent += BLOCK
-                    if stop[0]:
-                        return STOPPED
-                    if spent > allowed:
-                        counts.work[1] = history
-                        return TOO_MANY_EVENTS
+                    outcome = _may_go_on(work, stop)
+                    if outcome != DONE:
+                        return outcome
                     fill_uniforms(lanes, uniforms)
                     q = 0
                 if uniforms[q] >= chance:
                     rightward = not rightward
                 q += 1
-            if rightward:
-                if node == last:
-                    transmitted[b] += 1.0
-                    break
-                segment = node
-            else:
-                if node == 0:
-                    break
-                segment = node - 1
-            # Through the segment, in alternating flights.
+            if node == (last if rightward else 0):
+                break
+            segment = node if rightward else node - 1
+            # Through the segment in alternating flights; z and tau in backscattering paths.
             thick = optical_thickness(segment, b, energy, geometry, spectrum)
-            if tau >= thick:
-                tau -= thick
-                node += 1 if rightward else -1
-                continue
-            count = cells[segment]
-            base = first_cell[segment]
+            base, count = first_cell[segment], cells[segment]
             per_tau = count / thick
             z = 0.0 if rightward else thick
             while True:
-                if p >= BLOCK - 1:  # a pass below uses up to two numbers
-                    spent += BLOCK
-                    if stop[0]:
-                        return STOPPED
-                    if spent > allowed:
-                        counts.work[1] = history
-                        return TOO_MANY_EVENTS
-                    drawn += p
+                if p >= BLOCK - 1:  # a pass uses up to two numbers
+                    outcome = _may_go_on(work, stop)
+                    if outcome != DONE:
+                        return outcome
+                    work[TURNS] += p
                     p = 0
                     fill_exponentials(lanes, exponentials)
                 if rightward:
                     if tau >= thick - z:
                         tau -= thick - z
-                        node = segment + 1
                         break
                     z += tau
                     tau = exponentials[p]
                     p += 1
-                    place = z * per_tau
-                    c = min(np.int64(place), count - 1)
-                    turns[b, base + c, 0] += 1.0
-                    turns[b, base + c, 1] += place - c
+                    cell, part = _place(z * per_tau, count)
+                    turns[b, base + cell, 0] += 1.0
+                    turns[b, base + cell, 1] += part
                 if tau >= z:
                     tau -= z
-                    node = segment
                     rightward = False
                     break
                 z -= tau
                 tau = exponentials[p]
                 p += 1
                 rightward = True
-                place = z * per_tau
-                c = min(np.int64(place), count - 1)
-                turns[b, base + c, 0] -= 1.0
-                turns[b, base + c, 1] -= place - c
-    stream.position[0] = p
-    stream.position[1] = q
-    stream.flight[0] = tau
-    counts.work[0] += drawn + p
+                cell, part = _place(z * per_tau, count)
+                turns[b, base + cell, 0] -= 1.0
+                turns[b, base + cell, 1] -= part
+            node = segment + 1 if rightward else segment
+        if rightward:
+            transmitted[b] += 1.0
+    stream.position[0], stream.position[1], stream.flight[0] = p, q, tau
+    work[TURNS] += p
     return DONE
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def _place(place, count):
+    """Cell of a place in cell widths, and where in the cell; rounding may reach the far end."""
+    cell = min(np.int64(place), count - 1)
+    return cell, place - cell
+
+
+@njit(cache=True, error_model="numpy")
+def _may_go_on(work, stop):
+    """Whether a history may draw another block of random numbers."""
+    if stop[0]:
+        return STOPPED
+    work[BUDGET] -= BLOCK
+    return DONE if work[BUDGET] >= 0 else TOO_MANY_EVENTS

@@ -4,6 +4,7 @@ The only module that knows both the scenario's keys and the kernel's arrays.
 """
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -88,10 +89,10 @@ def build(scenario):
         scenario.contacts.bias_mV, scenario.left_temperature_K, scenario.right_temperature_K
     )
     nodes, transmissions = _nodes(scenario)
-    paths = [_paths_at(scenario, 0.5 * (a + b)) for a, b in zip(nodes, nodes[1:], strict=False)]
+    paths = [_paths_at(scenario, 0.5 * (a + b)) for a, b in pairwise(nodes)]
     length = np.diff(nodes)
     cells = np.maximum(1, np.rint(length / nodes[-1] * scenario.simulation.cells)).astype(np.int64)
-    edges = [np.linspace(a, b, n + 1)[1:] for a, b, n in zip(nodes, nodes[1:], cells, strict=False)]
+    edges = [np.linspace(a, b, n + 1)[1:] for (a, b), n in zip(pairwise(nodes), cells, strict=True)]
     constant = np.array([sum(1 / p.value for p in row if not _varies(p.value)) for row in paths])
     geometry = Geometry(
         thickness=length * constant,

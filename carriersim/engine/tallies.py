@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from numba import njit
 
-from carriersim.engine.flights import Counts
+from carriersim.engine.flights import TURNS, Counts
 
 
 @dataclass
@@ -35,7 +35,7 @@ def empty_counts(problem):
         turns=np.zeros((bins, problem.cells, 2)),
         arrivals=np.zeros((bins, nodes, 2)),
         transmitted=np.zeros(bins),
-        work=np.zeros(2, np.int64),
+        work=np.zeros(3, np.int64),
     )
 
 
@@ -52,7 +52,7 @@ def reduce(problem, counts, histories):
     _track_lengths(counts, weight, weights, *shape, cells, field)
     return Sample(
         histories=histories,
-        flights=int(counts.work[0] + counts.arrivals.sum()),
+        flights=int(counts.work[TURNS] + counts.arrivals.sum()),
         reached=int(counts.transmitted.sum()),
         transmitted=transmitted,
         arrivals=np.tensordot(problem.functionals.filling, arrivals, 1),
