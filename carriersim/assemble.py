@@ -192,7 +192,7 @@ def _breakdown(problem, observer, numbers):
     length = nodes[-1]
     left, right = numbers.many("interface")
     jumps = dict(zip(np.flatnonzero(problem.is_scatterer), numbers.many("jumps"), strict=True))
-    pieces = iter(numbers.many("pieces"))
+    pieces = iter(_without_rounding(numbers.many("pieces"), numbers.value["resistance"]))
     cuts = observer.cuts()
     parts = [Part("left interface", "interface", left, position_nm=0.0)]
     scatterers = 0
@@ -219,6 +219,12 @@ def _breakdown(problem, observer, numbers):
             )
     parts.append(Part("right interface", "interface", right, position_nm=float(length)))
     return tuple(parts)
+
+
+def _without_rounding(pieces, resistance):
+    """Pieces where nothing scatters have the resistance 0; differences of sums may leave 1e-16."""
+    least = ROUNDING * resistance
+    return [Estimate(0.0, 0.0) if abs(p.value) + p.error < least else p for p in pieces]
 
 
 def _fields(problem, observer, totals, batches):

@@ -8,6 +8,7 @@ bin width.
 """
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -68,7 +69,7 @@ def axis(window, tables, bins=None):
     the contacts and tables need, at least SMALLEST_AXIS).
     """
     fixed, density = _resolution(window, tables)
-    spans = [_span(low, high, density) for low, high in zip(fixed[:-1], fixed[1:], strict=True)]
+    spans = [_span(low, high, density) for low, high in pairwise(fixed)]
     need = sum(count for count, _, _ in spans)
     scale = (bins or max(SMALLEST_AXIS, min(need, 4000))) / need
     edges = [fixed[:1]]
@@ -188,7 +189,7 @@ class Bins:
             )
         c = np.zeros(self.count)
         place = np.searchsorted(self.edges, mu_meV)
-        # Equal thin bins stand on both sides of a step (see axis), so their mean is the value there.
+        # Equal thin bins stand on both sides of a step (see axis): their mean is the value there.
         c[[max(place - 1, 0), min(place, self.count - 1)]] += 0.5
         return c * float(factor(np.array([mu_meV]))[0]) * mu_meV**power
 

@@ -58,7 +58,7 @@ class Observer:
         return result
 
     def _thermal(self, t):
-        """Seebeck coefficient and thermal conductance at I = 0 (Sivan & Imry, PRB 33 (1986) 551)."""
+        """Seebeck coefficient and heat conductance at I = 0; Sivan & Imry, PRB 33 (1986) 551."""
         kelvin = self.window.mean_temperature_K
         left, right = self.window.temperature_left_K, self.window.temperature_right_K
         if abs(left - right) > SMALL_TEMPERATURE_DIFFERENCE * kelvin:

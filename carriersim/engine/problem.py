@@ -14,6 +14,8 @@ from carriersim.engine.energies import Bins, Window, axis, shares
 from carriersim.engine.flights import Geometry, Spectrum
 from carriersim.quantities import EnergyTable
 
+LEAST_SPREAD = 0.05  # of 1 - T: bins that let nearly everything through still get histories
+
 
 @dataclass(frozen=True)
 class Path:
@@ -109,7 +111,7 @@ def build(scenario):
         edges_meV = axis(window, [*tables, *mode_tables], scenario.simulation.energy_bins)
         bins = Bins(edges_meV, window.breaks())
         functionals = _binned_functionals(scenario, window, bins)
-        share = _share(bins, functionals, window)
+        share = _share(bins, functionals, window, _spread(bins, transmissions, paths, length))
         spectrum = _spectrum(bins, share, transmissions, paths, tables, length)
     else:
         functionals = _constant_functionals(float(modes), window)
@@ -285,10 +287,32 @@ def _binned_functionals(scenario, window, bins):
     )
 
 
-def _share(bins, functionals, window):
-    """Share of histories per bin: the drive of the current first, then what the rest needs."""
-    main = functionals.bias_slope if window.linear else functionals.current
-    return shares(bins, [main, main, functionals.bias_slope, functionals.thermal[2]])
+def _share(bins, functionals, window, spread):
+    """Share of histories per bin: what profiles, current, slope, heat and thermal block need.
+
+    A sum over bins of drive x response has the least error when histories go as the size of the
+    drive times the spread of one history's outcome (Neyman 1934, optimal allocation).
+    """
+    f = functionals
+    main = f.bias_slope if window.linear else f.current
+    numbers = [main, main, f.bias_slope, bins.centres * main, f.thermal[2]]
+    # Inside the channel outcomes spread whatever gets through: the profiles' need is the drive.
+    return shares(bins, [main, *(drive * spread for drive in numbers)])
+
+
+def _spread(bins, transmissions, paths, length_nm):
+    """Guess of a history's standard deviation, sqrt(T (1 - T)), at the centre of each bin.
+
+    T from the series law. It only decides where histories go: whatever it is, results are unbiased.
+    """
+    resistance = np.ones(bins.count)
+    for transmission in transmissions:
+        t = at_energy(transmission, bins.centres)
+        resistance += (1.0 - t) / t
+    for row, stretch in zip(paths, length_nm, strict=True):
+        for path in row:
+            resistance += stretch * path.rate_per_nm(bins.centres)
+    return np.sqrt(np.maximum(resistance - 1.0, LEAST_SPREAD * resistance)) / resistance
 
 
 def equilibrium_right(problem, energy_meV):

@@ -77,7 +77,7 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
     """
     stop = stop or StopRequest()
     simulation = problem.scenario.simulation
-    batches = [_new_stream(simulation.seed, b) for b in range(simulation.batches)]
+    batches = [new_stream(simulation.seed, b) for b in range(simulation.batches)]
     offsets = [
         np.uint64(int(streams.unit_offset(simulation.seed, b) * 2**64))
         for b in range(simulation.batches)
@@ -127,7 +127,8 @@ def relative_error(problem, totals):
     return float(each.std(ddof=1) / np.sqrt(each.size) / abs(mean))
 
 
-def _new_stream(seed, batch):
+def new_stream(seed, batch):
+    """Random numbers of one batch, at their beginning."""
     lanes = streams.seed_lanes(seed, batch)
     exponentials, uniforms = np.empty(streams.BLOCK), np.empty(streams.BLOCK)
     streams.fill_exponentials(lanes, exponentials)
@@ -178,7 +179,7 @@ def compile_for(problem):
     """Load or compile the variant of the kernels that a problem needs, without a history."""
     counts = tallies.empty_counts(problem)
     silent = np.zeros(1, np.uint8)
-    stream = _new_stream(0, 0)
+    stream = new_stream(0, 0)
     setting = np.uint64(0), problem.geometry, problem.spectrum, stream
     flights.fly(0, 0, *setting, counts, silent, EVENT_LIMIT)
     sample = tallies.reduce(problem, counts, 0)
