@@ -1,0 +1,554 @@
+"""Does a published test notice when the engine is wrong by 2 %?
+
+    python tests/mutation.py [--quick] [--list] [NAME ...]
+
+Each mutation scales one rate, path, transmission or constant inside the engine by 1.02, after the
+scenario has been validated, and runs the published tests that ought to notice, in a process of its
+own (by fork, so that the compiled kernels are loaded once). A mutation counts as caught only if a
+number disagrees with its expectation: not if a test breaks or finds its number too noisy. Without
+a mutation the same tests must pass. Exit status 0 if all this is so.
+"""
+
+import argparse
+import contextlib
+import dataclasses
+import io
+import multiprocessing
+import os
+import sys
+import time
+from collections.abc import Callable
+from multiprocessing.connection import wait
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
+
+import numpy as np
+import pytest
+
+from carriersim import fermi
+from carriersim.engine import observe, problem, tallies
+from tests.checks_of_numbers import TooNoisy, simulate
+
+ROOT = Path(__file__).resolve().parents[1]
+FACTOR = 1.02
+AT_ONCE = 2  # processes; each runs the kernels in two threads
+
+INTERRUPTED = pytest.ExitCode.INTERRUPTED  # by the recorder, at the first disagreement
+OPTIONS = ["-q", "--tb=no", "-m", "not slow", f"--rootdir={ROOT}", "-p", "no:cacheprovider"]
+
+ONE_SCATTERER = "test_one_scatterer.py::test_four_parts_at_the_scatterer_and_one_at_the_interfaces"
+LANDAUER = "test_landauer_integrals.py"
+MIXED_PARTS = "test_series_law.py::test_each_part_with_sections_mechanisms_and_barriers"
+TWO_STEP = "test_two_step_distribution.py"
+SERIES_LAW = "test_series_law.py"
+THERMO = "test_thermoelectric.py"
+
+
+class Applied:
+    """Counts how often a mutation has changed anything."""
+
+    count = 0
+
+
+@dataclasses.dataclass(frozen=True)
+class Mutation:
+    """One thing to be scaled. install: patches the engine in this process; tests: who notices."""
+
+    name: str
+    install: Callable[[], None]
+    tests: tuple[str, ...]
+    quick: bool = False
+
+
+def in_problem(change):
+    """An install function that passes every Problem through change (None: nothing to scale)."""
+
+    def install():
+        build = problem.build
+
+        def changed(scenario):
+            built = build(scenario)
+            new = change(built)
+            if new is None:
+                return built
+            Applied.count += 1
+            return new
+
+        problem.build = changed
+
+    return install
+
+
+def scaled(array, chosen):
+    """Copy of an array with the chosen entries scaled; None if that changes nothing."""
+    new = np.array(array, float)
+    new[chosen] *= FACTOR
+    return None if np.array_equal(new, array) else new
+
+
+def with_geometry(built, **arrays):
+    return dataclasses.replace(built, geometry=built.geometry._replace(**arrays))
+
+
+def with_spectrum(built, **arrays):
+    return dataclasses.replace(built, spectrum=built.spectrum._replace(**arrays))
+
+
+def transmission(choose):
+    """Scale the transmission of the node that choose(problem) gives (None: no such node)."""
+
+    def change(built):
+        node = choose(built)
+        if node is None or not built.geometry.transmission[node] < 1.0:
+            return None
+        new = scaled(built.geometry.transmission, node)
+        assert new[node] <= 1.0
+        return with_geometry(built, transmission=new)
+
+    return in_problem(change)
+
+
+def scatterer(number):
+    """The node of the number-th point scatterer of constant transmission, from 0."""
+
+    def choose(built):
+        nodes = np.flatnonzero(built.geometry.transmission[1:-1] < 1.0) + 1
+        return nodes[number] if number < nodes.size else None
+
+    return choose
+
+
+def transmission_table(choose):
+    """Scale the table of the node that choose(problem) gives."""
+
+    def change(built):
+        if built.spectrum is None:
+            return None
+        table = built.spectrum.node_table[choose(built)]
+        if table < 0:
+            return None
+        return scaled_table(built, table, largest=1.0)
+
+    return in_problem(change)
+
+
+def first_table(built):
+    """The first inner node whose transmission is a table."""
+    inner = np.flatnonzero(built.spectrum.node_table[1:-1] >= 0) + 1
+    return inner[0] if inner.size else 0
+
+
+def path_table(number):
+    """Scale the number-th table of a path."""
+
+    def change(built):
+        if built.spectrum is None:
+            return None
+        used = np.unique(built.spectrum.path_index)
+        return scaled_table(built, used[number]) if number < used.size else None
+
+    return in_problem(change)
+
+
+def scaled_table(built, table, largest=np.inf):
+    new = scaled(built.spectrum.values, np.s_[:, table])
+    width = np.diff(built.spectrum.edges_meV)
+    ends = new[:, table, 0] + 0.5 * np.abs(new[:, table, 1]) * width
+    assert ends.max() <= largest
+    return with_spectrum(built, values=new)
+
+
+def thickness(chosen):
+    """Scale the optical thickness of the segments that chosen(problem) marks (bool, K-1)."""
+
+    def change(built):
+        new = scaled(built.geometry.thickness, chosen(built))
+        return None if new is None else with_geometry(built, thickness=new)
+
+    return in_problem(change)
+
+
+def section(number):
+    """Segments of the number-th section."""
+
+    def chosen(built):
+        middle = 0.5 * (built.nodes_nm[1:] + built.nodes_nm[:-1])
+        sections = built.scenario.scattering.sections[number : number + 1]
+        inside = [(s.from_nm < middle) & (middle < s.to_nm) for s in sections]
+        return inside[0] if inside else np.zeros(middle.size, bool)
+
+    return chosen
+
+
+def outside_sections(built):
+    number = len(built.scenario.scattering.sections)
+    inside = [section(i)(built) for i in range(number)]
+    return ~np.any(inside, axis=0) if inside else np.ones(built.nodes_nm.size - 1, bool)
+
+
+def named_path(name):
+    """Scale the rate of one mechanism where it is one of several and a number."""
+
+    def change(built):
+        share = np.zeros(built.geometry.thickness.size)
+        for i, paths in enumerate(built.segment_paths):
+            rates = {p.name: 1 / p.value for p in paths if isinstance(p.value, float)}
+            if name in rates and len(rates) > 1:
+                share[i] = rates[name] / sum(rates.values())
+        if not share.any():
+            return None
+        new = built.geometry.thickness * (1 + (FACTOR - 1) * share)
+        return with_geometry(built, thickness=new)
+
+    return in_problem(change)
+
+
+def path_share(name):
+    """Scale a mechanism's path where a piece is split among mechanisms, and nowhere else."""
+
+    def change(built):
+        found = False
+        segments = []
+        for paths in built.segment_paths:
+            row = []
+            for path in paths:
+                if path.name == name and len(paths) > 1 and isinstance(path.value, float):
+                    path = dataclasses.replace(path, value=path.value * FACTOR)
+                    found = True
+                row.append(path)
+            segments.append(tuple(row))
+        return dataclasses.replace(built, segment_paths=tuple(segments)) if found else None
+
+    return in_problem(change)
+
+
+def functional(name, index=None):
+    """Scale one of the integrals that results are made of."""
+
+    def change(built):
+        old = getattr(built.functionals, name)
+        if old is None:
+            return None
+        if index is None:
+            new = old * FACTOR
+        else:
+            new = tuple(c * FACTOR if i == index else c for i, c in enumerate(old))
+        functionals = dataclasses.replace(built.functionals, **{name: new})
+        return dataclasses.replace(built, functionals=functionals)
+
+    return in_problem(change)
+
+
+def in_channel(key):
+    """Scale a number of the scenario's channel that results are computed with."""
+
+    def change(built):
+        channel = built.scenario.channel
+        channel = channel.model_copy(update={key: getattr(channel, key) * FACTOR})
+        return dataclasses.replace(
+            built, scenario=built.scenario.model_copy(update={"channel": channel})
+        )
+
+    return in_problem(change)
+
+
+def probe_weight(built):
+    probes = built.scenario.probes
+    if not probes:
+        return None
+    new = tuple(
+        p.model_copy(update={"weight_right": min(FACTOR * p.weight_right, 1.0)}) for p in probes
+    )
+    scenario = built.scenario.model_copy(update={"probes": new})
+    return dataclasses.replace(built, scenario=scenario)
+
+
+def constant(module, name):
+    """Scale a constant as one module sees it."""
+
+    def install():
+        setattr(module, name, getattr(module, name) * FACTOR)
+        Applied.count += 1
+
+    return install
+
+
+def argument(module, name, position):
+    """Scale a numeric argument of one function or class of a module."""
+
+    def install():
+        function = getattr(module, name)
+
+        def changed(*arguments, **keywords):
+            new = list(arguments)
+            new[position] = new[position] * FACTOR
+            Applied.count += 1
+            return function(*new, **keywords)
+
+        setattr(module, name, changed)
+
+    return install
+
+
+def result_of(module, name):
+    """Scale what one function of a module returns."""
+
+    def install():
+        function = getattr(module, name)
+
+        def changed(*arguments):
+            Applied.count += 1
+            return function(*arguments) * FACTOR
+
+        setattr(module, name, changed)
+
+    return install
+
+
+def mean_free_path():
+    """Scale the backscattering path that a mean free path stands for, 2 l."""
+    function = problem._scaled
+
+    def changed(value, factor):
+        Applied.count += factor != 1.0
+        return function(value, factor * FACTOR if factor != 1.0 else factor)
+
+    problem._scaled = changed
+
+
+def tally(name, column=np.s_[:]):
+    """Scale one of the kernel's counts before it becomes a response."""
+
+    def install():
+        reduce = tallies.reduce
+
+        def changed(built, counts, histories):
+            getattr(counts, name)[..., column] *= FACTOR
+            Applied.count += 1
+            return reduce(built, counts, histories)
+
+        tallies.reduce = changed
+
+    return install
+
+
+def left_node(built):
+    return 0
+
+
+def right_node(built):
+    return -1
+
+
+def _barrier(name, case="barrier 30 mV 77 K"):
+    return (f"{LANDAUER}::{name}[{case}]",)
+
+
+FIVE = (f"{SERIES_LAW}::test_each_scatterer",)
+EVERYTHING = (f"{LANDAUER}::test_each_part_drops_its_share_of_the_potential[everything 0 mV 50 K]",)
+CURRENT = _barrier("test_current_and_resistance")
+BALLISTIC = "test_codata.py::test_a_channel_without_scatterers_has_one_quantum_per_mode"
+ANY_BALLISTIC = (f"{BALLISTIC}[1-2-10.0]",)
+SCALES = ("test_wiedemann_franz.py::test_ratio_at_a_small_temperature_difference[300-300]",)
+SUBBANDS = ("test_subbands.py::test_current_and_its_slope",)
+LINEAR = (f"{THERMO}::test_linear_coefficients[rising]",)
+UNEQUAL = (f"{THERMO}::test_contacts_of_different_temperature[hot left]",)
+
+MUTATIONS = (
+    Mutation("transmission of scatterer 1", transmission(scatterer(0)), (ONE_SCATTERER,), True),
+    *(
+        Mutation(f"transmission of scatterer {n + 1}", transmission(scatterer(n)), FIVE)
+        for n in range(1, 5)
+    ),
+    Mutation("transmission of the left interface", transmission(left_node), (MIXED_PARTS,)),
+    Mutation("transmission of the right interface", transmission(right_node), (MIXED_PARTS,)),
+    Mutation("table of a scatterer", transmission_table(first_table), CURRENT, True),
+    Mutation("table of the left interface", transmission_table(left_node), EVERYTHING),
+    Mutation("table of the right interface", transmission_table(right_node), EVERYTHING),
+    Mutation("rate of the channel", thickness(outside_sections), SCALES, True),
+    Mutation("rate of section 1", thickness(section(0)), (MIXED_PARTS,)),
+    Mutation("rate of section 2", thickness(section(1)), (MIXED_PARTS,)),
+    Mutation("rate of the first named path", named_path("defects"), (MIXED_PARTS,)),
+    Mutation("rate of the second named path", named_path("phonons"), (MIXED_PARTS,)),
+    Mutation("share of the first named path", path_share("defects"), (MIXED_PARTS,)),
+    Mutation("share of the second named path", path_share("phonons"), (MIXED_PARTS,)),
+    Mutation("mean free path to backscattering path", mean_free_path, (MIXED_PARTS,)),
+    Mutation(
+        "table of a path",
+        path_table(0),
+        (f"{LANDAUER}::test_each_part_drops_its_share_of_the_potential[wire -25 mV 60 K]",),
+        True,
+    ),
+    Mutation("table of the second named path", path_table(1), EVERYTHING),
+    Mutation(
+        "length of segments with path tables",
+        in_problem(
+            lambda p: (
+                with_spectrum(p, length_nm=p.spectrum.length_nm * FACTOR)
+                if p.spectrum is not None and p.spectrum.path_index.size
+                else None
+            )
+        ),
+        (f"{LANDAUER}::test_each_part_drops_its_share_of_the_potential[wire -25 mV 60 K]",),
+    ),
+    Mutation("modes", argument(problem, "_constant_functionals", 0), ANY_BALLISTIC, True),
+    Mutation("table of modes", result_of(problem, "modes_at"), SUBBANDS, True),
+    Mutation("degeneracy", in_channel("degeneracy"), ANY_BALLISTIC),
+    Mutation("charge: current", constant(observe, "AMPERE_PER_MEV"), ANY_BALLISTIC),
+    Mutation("charge: power", constant(observe, "WATT_PER_MEV2"), SCALES),
+    Mutation("Boltzmann: Fermi functions", constant(fermi, "BOLTZMANN_MEV_PER_K"), LINEAR, True),
+    Mutation("Boltzmann: closed integrals", constant(problem, "BOLTZMANN_MEV_PER_K"), SCALES),
+    Mutation("Boltzmann: temperatures", constant(observe, "BOLTZMANN_MEV_PER_K"), (TWO_STEP,)),
+    Mutation("bias", argument(problem, "Window", 0), CURRENT),
+    Mutation("left temperature", argument(problem, "Window", 1), UNEQUAL),
+    Mutation("right temperature", argument(problem, "Window", 2), UNEQUAL),
+    Mutation("integral of the current", functional("current"), CURRENT),
+    Mutation(
+        "integral of its slope",
+        functional("bias_slope"),
+        _barrier("test_differential_resistance_is_taken_at_the_bias"),
+    ),
+    Mutation("integral of the heat", functional("heat"), _barrier("test_heat_in_each_contact")),
+    Mutation(
+        "integral of the filling", functional("filling"), _barrier("test_levels_beside_the_middle")
+    ),
+    Mutation("integral of the number", functional("number"), (TWO_STEP,)),
+    Mutation("integral of the energy", functional("energy"), (TWO_STEP,)),
+    *(
+        Mutation(f"thermal integral {n}", functional("thermal", n), LINEAR, quick=n == 1)
+        for n in range(3)
+    ),
+    Mutation("mean number of modes", functional("mean_modes"), ANY_BALLISTIC),
+    Mutation(
+        "share of the histories",
+        in_problem(lambda p: dataclasses.replace(p, share=p.share * FACTOR)),
+        CURRENT,
+    ),
+    Mutation("weight of probes", in_problem(probe_weight), ("test_probe_weight.py::test_reading",)),
+    Mutation("tally of turns", tally("turns"), (TWO_STEP,)),
+    Mutation("tally of arrivals from the left", tally("arrivals", 0), FIVE),
+    Mutation("tally of arrivals from the right", tally("arrivals", 1), FIVE),
+    Mutation("tally of what gets through", tally("transmitted"), (ONE_SCATTERER,)),
+)
+
+
+class Recorder:
+    """Pytest plugin: counts what passed, disagreed and broke; ends at the first disagreement."""
+
+    def __init__(self, stop):
+        self.stop = stop
+        self.passed, self.noisy, self.broken, self.disagreed = 0, [], [], []
+
+    def pytest_runtest_logreport(self, report):
+        self.passed += report.when == "call" and report.passed
+
+    def pytest_exception_interact(self, node, call, report):
+        error = call.excinfo.value
+        where = node.name
+        if isinstance(error, TooNoisy):
+            self.noisy.append(f"{where}: {error}")
+        elif isinstance(error, AssertionError):
+            self.disagreed.append(f"{where}: {error}".partition("\n")[0])
+            if self.stop:
+                node.session.shouldstop = "noticed"
+        else:
+            self.broken.append(f"{where}: {error!r}")
+
+
+def run_tests(install, tests):
+    """Install a mutation in this process and run tests; returns a dict for the parent."""
+    if install is not None:
+        install()
+    recorder = Recorder(stop=install is not None)
+    places = [str(ROOT / "tests" / "published" / test) for test in tests]
+    with contextlib.redirect_stdout(io.StringIO()), contextlib.redirect_stderr(io.StringIO()):
+        status = pytest.main([*places, *OPTIONS], plugins=[recorder])
+    answer = {key: getattr(recorder, key) for key in ("passed", "noisy", "broken", "disagreed")}
+    return answer | {"applied": Applied.count, "status": int(status)}
+
+
+def in_children(tasks):
+    """Run (key, install, tests) in forked children, AT_ONCE at a time; yields (key, answer)."""
+    context = multiprocessing.get_context("fork")
+    waiting, running = list(tasks), {}
+
+    def work(pipe, install, tests):
+        pipe.send(run_tests(install, tests))
+        pipe.close()
+
+    while waiting or running:
+        while waiting and len(running) < AT_ONCE:
+            key, install, tests = waiting.pop(0)
+            mine, theirs = context.Pipe(duplex=False)
+            child = context.Process(target=work, args=(theirs, install, tests))
+            child.start()
+            theirs.close()
+            running[mine] = key, child
+        for pipe in wait(list(running)):
+            key, child = running.pop(pipe)
+            try:
+                answer = pipe.recv()
+            except EOFError:
+                answer = {"broken": ["the process ended without an answer"]}
+            child.join()
+            yield key, answer
+
+
+def verdict(mutation, answer):
+    """None if all is well, else what is wrong. mutation None: the negative control."""
+    if answer["broken"]:
+        return f"broke: {answer['broken'][0]}"
+    if answer["status"] not in (pytest.ExitCode.OK, pytest.ExitCode.TESTS_FAILED, INTERRUPTED):
+        return f"pytest ended with status {answer['status']}: is there no such test?"
+    if mutation is None:
+        if answer["disagreed"] or answer["noisy"] or not answer["passed"] or answer["status"]:
+            return f"{(answer['disagreed'] or answer['noisy'] or ['nothing ran'])[0]}"
+        return None
+    if not answer["applied"]:
+        return "changed nothing"
+    if not answer["disagreed"]:
+        return f"NOT NOTICED by {answer['passed']} tests" + "".join(
+            f"; {n}" for n in answer["noisy"]
+        )
+    return None
+
+
+def check(mutations):
+    """Run the mutations and the control; prints a line for each, returns those that failed."""
+    tests = tuple(sorted({test for m in mutations for test in m.tests}))
+    tasks = [(None, None, tests), *((m, m.install, m.tests) for m in mutations)]
+    failed = []
+    for mutation, answer in in_children(tasks):
+        name = mutation.name if mutation else "no mutation"
+        wrong = verdict(mutation, answer)
+        if wrong:
+            failed.append(name)
+        fine = answer["disagreed"][0] if mutation and not wrong else f"{answer.get('passed')} pass"
+        print(f"{'FAIL' if wrong else 'ok':4} {name}: {wrong or fine}", flush=True)
+    return failed
+
+
+def main():
+    parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
+    parser.add_argument("names", nargs="*", help="only mutations with one of these in their name")
+    parser.add_argument("--quick", action="store_true", help="a few that are fast")
+    parser.add_argument("--list", action="store_true")
+    asked = parser.parse_args()
+    chosen = [m for m in MUTATIONS if m.quick or not asked.quick]
+    if asked.names:
+        chosen = [m for m in chosen if any(name in m.name for name in asked.names)]
+    if asked.list:
+        print(*(m.name for m in chosen), sep="\n")
+        return 0
+    os.chdir(ROOT)
+    begin = time.perf_counter()
+    # Load the compiled kernels before the children are forked.
+    simulate("{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}}")
+    failed = check(chosen)
+    print(f"{len(chosen)} mutations, {len(failed)} failed, {time.perf_counter() - begin:.0f} s")
+    return 1 if failed else 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
