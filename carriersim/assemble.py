@@ -41,6 +41,11 @@ def assemble(problem, totals, scenario):
     )
     for key in ("current", "conductance", "resistance", "differential", "transmission"):
         error[key] = _not_below_one_event(error[key], value[key], totals, problem)
+    # A jump or a piece in which nobody was turned back is not known to be 0: one carrier's worth.
+    one = abs(value["resistance"]) / totals.histories.sum()
+    error["jumps"] = np.maximum(error["jumps"], one)
+    scatters = observer.piece_scatters()
+    error["pieces"] = np.where(scatters, np.maximum(error["pieces"], one), error["pieces"])
     numbers = _Numbers(value, error)
     why = _reasons(problem, numbers)
     result = Result(
@@ -259,13 +264,18 @@ def _one_bin_fields(problem, observer, totals, batches, right, drive):
 
     def responses(sums):
         g = sums["cells"][0] / sums["histories"] / full
-        return {"g": g, "departure": _departure_from(problem, observer, g.mean(axis=-1))}
+        return {"g": g, "mean": g.mean(axis=-1)}
 
     value, error = jackknife(responses, batches | {"cells": totals.cells})
     g, g_error = value["g"], error["g"]
+    # The departure is a smooth function of one number per cell: no replicates of all energies.
+    mean, mean_error = value["mean"], error["mean"]
+    departure = _departure_from(problem, observer, mean)
+    ends = [_departure_from(problem, observer, mean + side * mean_error) for side in (1, -1)]
+    departure_error = 0.5 * np.abs(ends[0] - ends[1])
     occupations = [right[:, None] + drive[:, None] * g[:, i] for i in (0, 1)]
     errors = [np.abs(drive)[:, None] * g_error[:, i] for i in (0, 1)]
-    return occupations, errors, value["departure"], error["departure"]
+    return occupations, errors, departure, departure_error
 
 
 def _departure_from(problem, observer, g):
@@ -286,8 +296,13 @@ def _binned_fields(problem, observer, totals, value, right, drive):
     n, k = float(totals.histories.sum()), totals.samples
     mean = totals.field_sum / n
     variance = np.maximum(totals.field_square - totals.field_sum**2 / n, 0.0) / (k - 1) / n
+    # A bin that few visit would claim certainty: at least what one more visitor would change.
+    least = 1.0 / (n * problem.share)[:, None]
+    spread = np.repeat(np.maximum(np.sqrt(variance[:2]), least), observer.finer, axis=1)
+    in_bins = variance[2]
+    mean, variance = (np.repeat(a, observer.finer, axis=1) for a in (mean, variance))
     occupations = [right[:, None] + drive[:, None] * mean[i] for i in (0, 1)]
-    errors = [np.abs(drive)[:, None] * np.sqrt(variance[i]) for i in (0, 1)]
+    errors = [np.abs(drive)[:, None] * spread[i] for i in (0, 1)]
     if problem.functionals.energy is None:
         nothing = np.full(problem.cells, np.nan)
         return occupations, errors, nothing, nothing
@@ -300,7 +315,9 @@ def _binned_fields(problem, observer, totals, value, right, drive):
     square, derivative = departure_of(f, observer.grid.centres, widths, number, kelvin)
     scale = np.where(kelvin > 0.0, BOLTZMANN_MEV_PER_K * kelvin, 1.0)
     square = square - np.einsum("ec,e->c", noise, widths) / scale
-    error = np.sqrt(np.einsum("ec,ec->c", derivative**2, noise))
+    # The parts of one bin err together.
+    pull = (derivative * drive[:, None]).reshape(-1, observer.finer, problem.cells).sum(axis=1)
+    error = np.sqrt(np.einsum("bc,bc->c", pull**2, in_bins))
     departure = np.sqrt(np.maximum(square, 0.0))
     # d sqrt(s) = ds / (2 sqrt(s)); near zero the root of the error bounds it instead.
     bound = 2.0 * np.maximum(departure, np.sqrt(error))

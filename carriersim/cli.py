@@ -103,7 +103,10 @@ def _changes(options):
         key, equals, value = text.partition("=")
         if not equals or not key.strip():
             raise UsageError(f"--set {text}: allowed: KEY=VALUE, e.g. contacts.bias_mV=5")
-        changes[key.strip()] = read_value(value)
+        try:
+            changes[key.strip()] = read_value(value)
+        except ScenarioError as error:
+            raise UsageError(f"--set {text}: the value {error.faults[0].message}") from error
     if getattr(options, "seed", None) is not None:
         changes["simulation.seed"] = options.seed
     if getattr(options, "relative_error", None) is not None:
@@ -130,19 +133,15 @@ def _check(options):
         return DONE
     if options.scenario is None:
         raise UsageError("check: name a scenario file, or ask for --schema")
-    from rich.console import Console
-
     from carriersim import limits, report
     from carriersim.disorder import draw_random_points
 
     scenario = draw_random_points(load(options.scenario, _changes(options)))
-    report.print_limits(scenario, limits.limits_for(scenario), Console())
+    report.print_limits(scenario, limits.limits_for(scenario), _output())
     return DONE
 
 
 def _run(options):
-    from rich.console import Console
-
     from carriersim import report, storage
     from carriersim.scenario import load
 
@@ -160,12 +159,26 @@ def _run(options):
         )
         return INTERRUPTED
     try:
-        result.save(place, figures=not options.no_figures)
+        # After a Ctrl-C the results are due within a second, which drawing would exceed.
+        interrupted = result.stopped_by == "interrupted"
+        result.save(place, figures=not options.no_figures and not interrupted)
     except storage.PlaceError as error:
         return _refuse(error)
-    report.print_result(result, Console())
+    report.print_result(result, _output())
     print(f"results: {place}")
     return _status(result)
+
+
+def _output():
+    """The terminal or file that results are printed to; goes quiet when its reader has gone."""
+    from rich.console import Console
+
+    class Output(Console):
+        def on_broken_pipe(self):  # rich would end the process with status 1
+            self.quiet = True
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+    return Output()
 
 
 def _status(result):

@@ -18,14 +18,16 @@ def jackknife(function, batches):
     count = next(iter(batches.values())).shape[0]
     mean = {key: np.zeros(np.shape(value)) for key, value in values.items()}
     square = {key: np.zeros(np.shape(value)) for key, value in values.items()}
-    for b in range(count):
-        replicate = function({key: totals[key] - batches[key][b] for key in batches})
-        for key, value in replicate.items():
-            # Differences to the full value: small numbers, so the sum of squares keeps its digits.
-            difference = value - values[key]
-            mean[key] += difference / count
-            square[key] += difference**2 / count
-    errors = {
-        key: np.sqrt((count - 1) * np.maximum(square[key] - mean[key] ** 2, 0.0)) for key in values
-    }
+    with np.errstate(invalid="ignore"):  # replicates may be infinite: their error is nan
+        for b in range(count):
+            replicate = function({key: totals[key] - batches[key][b] for key in batches})
+            for key, value in replicate.items():
+                # Differences to the full value: small, so the sum of squares keeps its digits.
+                difference = value - values[key]
+                mean[key] += difference / count
+                square[key] += difference**2 / count
+        errors = {
+            key: np.sqrt((count - 1) * np.maximum(square[key] - mean[key] ** 2, 0.0))
+            for key in values
+        }
     return values, errors

@@ -61,6 +61,11 @@ def check_place(directory):
     if directory.is_symlink() or (directory.exists() and not directory.is_dir()):
         raise PlaceError(f"{directory}: not a directory; choose another place with --out")
     if directory.exists():
+        if directory.samefile(os.curdir):
+            raise PlaceError(
+                f"{directory}: the working directory can't be replaced; "
+                "choose another place with --out"
+            )
         _check_ours(directory)
     parent = directory.absolute().parent
     while not parent.exists():
@@ -139,8 +144,14 @@ def _put_in_place(work, directory):
         return
     _check_ours(directory)
     if not _exchange(work, directory):
-        shutil.rmtree(directory)
-        os.rename(work, directory)
+        aside = work.with_name(f"{work.name}.old")
+        os.rename(directory, aside)
+        try:
+            os.rename(work, directory)
+        except OSError:
+            os.rename(aside, directory)
+            raise
+        shutil.rmtree(aside, ignore_errors=True)
 
 
 def _exchange(first, second):

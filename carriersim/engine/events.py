@@ -39,5 +39,5 @@ def optical_thickness(segment, b, energy, geometry, spectrum):
         for i in range(spectrum.path_first[segment], spectrum.path_first[segment + 1]):
             table = spectrum.path_index[i]
             path = spectrum.values[b, table, 0] + spectrum.values[b, table, 1] * energy
-            thickness += spectrum.length_nm[segment] / path
+            thickness += geometry.length_nm[segment] / path
     return thickness

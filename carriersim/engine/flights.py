@@ -24,6 +24,7 @@ DONE, STOPPED, TOO_MANY_EVENTS = 0, 1, 2
 class Geometry(NamedTuple):
     """Segments and nodes; K nodes, K - 1 segments."""
 
+    length_nm: np.ndarray  # (K-1,)
     thickness: np.ndarray  # (K-1,) optical thickness L_segment/lam of the part constant in energy
     first_cell: np.ndarray  # (K-1,) int64
     cells: np.ndarray  # (K-1,) int64, cells of equal width in each segment
@@ -42,7 +43,6 @@ class Spectrum(NamedTuple):
     path_first: np.ndarray  # (K,) int64, segment s uses path_index[path_first[s]:path_first[s+1]]
     path_index: np.ndarray  # int64, which path table
     values: np.ndarray  # (B, tables, 2): transmissions, and backscattering paths in nm
-    length_nm: np.ndarray  # (K-1,) of each segment
 
 
 class Stream(NamedTuple):

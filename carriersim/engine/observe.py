@@ -10,6 +10,7 @@ from carriersim import fermi
 from carriersim.constants import AMPERE_PER_MEV, BOLTZMANN_MEV_PER_K, WATT_PER_MEV2
 from carriersim.engine.energies import Bins, axis
 
+FEWEST_ENERGIES = 200  # in the files
 SMALL_TEMPERATURE_DIFFERENCE = 0.01  # up to here the thermal block gives linear coefficients
 
 
@@ -27,8 +28,12 @@ class Observer:
         else:
             self.drive = f.bias_slope
         self.ballistic_ohm = 1e-3 / (AMPERE_PER_MEV * self.degeneracy * f.mean_modes)
-        # The output grid; with several bins it is the run's own.
+        # The output grid; with several bins it is the run's own, each cut into `finer` parts.
+        self.finer = 1
         self.grid = problem.bins or Bins(axis(self.window, []), self.window.breaks())
+        if self.grid.count < FEWEST_ENERGIES:
+            self.finer = -(-FEWEST_ENERGIES // self.grid.count)
+            self.grid = Bins(_cut(self.grid.edges, self.finer), self.window.breaks())
         self.root_meV, self.root_functionals = None, None
 
     def scalars(self, totals):
@@ -149,6 +154,11 @@ class Observer:
             * resistance,
         }
 
+    def piece_scatters(self):
+        """For each piece and mechanism of the breakdown, whether anything scatters there."""
+        paths = [self.problem.segment_paths[node] for node in self.cuts()[:-1]]
+        return np.array([bool(here) for here in paths for _ in here or [None]])
+
     def cuts(self):
         """Nodes where the breakdown is cut: contacts, point scatterers, section edges."""
         cut = self.problem.is_scatterer | self.problem.is_section_edge
@@ -157,7 +167,7 @@ class Observer:
 
     def _mechanism_shares(self, t):
         """For each piece the share of the backscattered flux that each of its paths destroys."""
-        centres = self.grid.centres if self.problem.bins else np.zeros(1)
+        centres = self.problem.bins.centres if self.problem.bins else np.zeros(1)
         flux = np.abs(self.drive * t)
         known = {}
         shares = []
@@ -198,6 +208,12 @@ class Observer:
         """F_R and F_L - F_R, both (E,): the state itself, at bias 0 that of no bias."""
         e, w = self.grid.centres, self.window
         return fermi.occupation(e, 0.0, w.temperature_right_K), w.difference(e)
+
+
+def _cut(edges, parts):
+    """Each interval cut into equal parts."""
+    inner = np.linspace(edges[:-1], edges[1:], parts, endpoint=False)
+    return np.append(inner.T.ravel(), edges[-1])
 
 
 def _pair_differences(reading):

@@ -97,6 +97,7 @@ def build(scenario):
     edges = [np.linspace(a, b, n + 1)[1:] for (a, b), n in zip(pairwise(nodes), cells, strict=True)]
     constant = np.array([sum(1 / p.value for p in row if not _varies(p.value)) for row in paths])
     geometry = Geometry(
+        length_nm=length,
         thickness=length * constant,
         first_cell=np.concatenate([[0], np.cumsum(cells)[:-1]]).astype(np.int64),
         cells=cells,
@@ -112,7 +113,7 @@ def build(scenario):
         bins = Bins(edges_meV, window.breaks())
         functionals = _binned_functionals(scenario, window, bins)
         share = _share(bins, functionals, window, _spread(bins, transmissions, paths, length))
-        spectrum = _spectrum(bins, share, transmissions, paths, tables, length)
+        spectrum = _spectrum(bins, share, transmissions, paths, tables)
     else:
         functionals = _constant_functionals(float(modes), window)
     return Problem(
@@ -201,7 +202,7 @@ def _distinct(values):
     return list(seen.values())
 
 
-def _spectrum(bins, share, transmissions, paths, tables, length_nm):
+def _spectrum(bins, share, transmissions, paths, tables):
     """The kernel's view of everything that depends on energy."""
     place = {(t.energy_meV, t.value): i for i, t in enumerate(tables)}
 
@@ -222,7 +223,6 @@ def _spectrum(bins, share, transmissions, paths, tables, length_nm):
         path_first=np.concatenate([[0], np.cumsum([len(u) for u in used])]).astype(np.int64),
         path_index=np.array([i for row in used for i in row], np.int64),
         values=values,
-        length_nm=length_nm,
     )
 
 

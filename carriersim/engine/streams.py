@@ -66,7 +66,7 @@ def _as_bits(typingctx, value):
 
 
 @njit(cache=True, inline="always", error_model="numpy")
-def _minus_log(u):
+def minus_log(u):
     """-ln(u) for u in [2**-53, 1], within 2e-16 of the larger of 1 and the result.
 
     u = 2**e * m with m in [1/sqrt2, sqrt2); ln m = 2 artanh(s), s = (m-1)/(m+1), |s| < 0.1716.
@@ -124,4 +124,4 @@ def fill_uniforms(lanes, out):
 def fill_exponentials(lanes, out):
     """BLOCK exponential numbers of mean 1 into out; lanes (4 * BLOCK,) advances."""
     for k in range(BLOCK):
-        out[k] = _minus_log(2.0 - _one_to_two(_next_bits(lanes, k)))
+        out[k] = minus_log(2.0 - _one_to_two(_next_bits(lanes, k)))
