@@ -385,7 +385,7 @@ MUTATIONS = (
         "length of segments with path tables",
         in_problem(
             lambda p: (
-                with_spectrum(p, length_nm=p.spectrum.length_nm * FACTOR)
+                with_geometry(p, length_nm=p.geometry.length_nm * FACTOR)
                 if p.spectrum is not None and p.spectrum.path_index.size
                 else None
             )

@@ -410,6 +410,18 @@ def check_errors(result):
         assert missing or ((error >= 0) & np.isfinite(error)).all(), name
 
 
+def judged(row, result):
+    """Whether a closed form is exact and the simulation can tell its error.
+
+    A part that turns back fewer than thirty carriers of the run has no error bar worth the name.
+    """
+    if row.holds != "exact" or row.z is None:
+        return False
+    resistance = result.resistance_ohm or result.differential_resistance_ohm
+    part = row.quantity.startswith(("breakdown", "four_point"))
+    return not part or row.expected > 30 * resistance.value / result.histories
+
+
 def test_conservation_laws():
     """Flux, heat, resistance and occupations in 200 scenarios over all groups of keys."""
     seen, scores, scored = Counter(), [], []
@@ -428,7 +440,7 @@ def test_conservation_laws():
         check_breakdown(result)
         check_occupations(result)
         check_errors(result)
-        z = [row.z for row in result.limits if row.holds == "exact" and row.z is not None]
+        z = [row.z for row in result.limits if judged(row, result)]
         scored.extend([np.array(z)] if z else [])
 
     holds()

@@ -14,7 +14,7 @@ from carriersim.engine.energies import Bins, Window, axis, shares
 from carriersim.engine.flights import Geometry, Spectrum
 from carriersim.quantities import EnergyTable
 
-LEAST_SPREAD = 0.05  # of 1 - T: bins that let nearly everything through still get histories
+LEAST_SPREAD = 0.15  # of the greatest, 1/2 at T = 1/2: rare outcomes need histories to show at all
 
 
 @dataclass(frozen=True)
@@ -295,7 +295,7 @@ def _share(bins, functionals, window, spread):
     """
     f = functionals
     main = f.bias_slope if window.linear else f.current
-    numbers = [main, main, f.bias_slope, bins.centres * main, f.thermal[2]]
+    numbers = [main, main, f.current, f.bias_slope, f.heat, f.thermal[2]]
     # Inside the channel outcomes spread whatever gets through: the profiles' need is the drive.
     return shares(bins, [main, *(drive * spread for drive in numbers)])
 
@@ -312,7 +312,7 @@ def _spread(bins, transmissions, paths, length_nm):
     for row, stretch in zip(paths, length_nm, strict=True):
         for path in row:
             resistance += stretch * path.rate_per_nm(bins.centres)
-    return np.sqrt(np.maximum(resistance - 1.0, LEAST_SPREAD * resistance)) / resistance
+    return np.maximum(np.sqrt(resistance - 1.0) / resistance, 0.5 * LEAST_SPREAD)
 
 
 def equilibrium_right(problem, energy_meV):

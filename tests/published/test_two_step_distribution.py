@@ -163,8 +163,12 @@ simulation: {{histories: 1.2e+7, cells: 20, energy_bins: 12}}
 
 @pytest.mark.parametrize("place", [45.0, 95.0])
 def test_step_height_follows_a_path_that_depends_on_energy(selective, place):
-    """An elastic wire is a wire of its own at each energy; bins hold the mean over themselves."""
-    edges = selective.energy_edges_meV
+    """An elastic wire is a wire of its own at each energy; bins hold the mean over themselves.
+
+    The file lists at least 200 energies: several of them share a bin of the run, and its mean.
+    """
+    first = np.append(0, 1 + np.flatnonzero(np.any(np.diff(selective.f_minus, axis=0), axis=1)))
+    edges = np.append(selective.energy_edges_meV[first], selective.energy_edges_meV[-1])
     bins = np.flatnonzero((edges[:-1] > 0.1) & (edges[1:] < 24.9) & (np.diff(edges) > 0.1))
     assert bins.size >= 5
     energies, values = zip(*TABLE, strict=True)
@@ -180,4 +184,4 @@ def test_step_height_follows_a_path_that_depends_on_energy(selective, place):
             for a, b in zip(edges[bins], edges[bins + 1], strict=True)
         ]
         values_of, errors = getattr(selective, name), selective.errors[name]
-        agree_each(values_of[bins, cell], errors[bins, cell], expected)
+        agree_each(values_of[first[bins], cell], errors[first[bins], cell], expected)
