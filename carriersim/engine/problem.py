@@ -11,7 +11,20 @@ import numpy as np
 from carriersim import fermi
 from carriersim.constants import BOLTZMANN_MEV_PER_K
 from carriersim.engine.energies import Bins, Window, axis, shares
+from carriersim.engine.events import Tables
 from carriersim.engine.flights import Geometry, Spectrum
+from carriersim.engine.mechanisms import (
+    KEPT_CARRIERS,
+    RANDOM_CARRIERS,
+    Axis,
+    Mechanisms,
+    Probes,
+    axis_of,
+    mechanisms_of,
+    probes_of,
+    reference,
+)
+from carriersim.engine.wander import Setting
 from carriersim.quantities import EnergyTable
 
 LEAST_SPREAD = 0.15  # of the greatest, 1/2 at T = 1/2: rare outcomes need histories to show at all
@@ -46,6 +59,19 @@ class Functionals:
 
 
 @dataclass(frozen=True)
+class Relaxed:
+    """What a problem with relaxation or coupled probes has on top."""
+
+    axis: Axis
+    setting: Setting
+    mechanisms: Mechanisms
+    probes: Probes
+    tables: Tables | None
+    reference: np.ndarray  # (B,) F_r averaged over each bin
+    probe_kelvin: np.ndarray  # (K,)
+
+
+@dataclass(frozen=True)
 class Problem:
     """Everything a run needs, built once. K nodes, K-1 segments, C cells, B energy bins."""
 
@@ -63,6 +89,7 @@ class Problem:
     is_section_edge: np.ndarray  # (K,) bool
     probe_node: np.ndarray  # (probes,) int64
     transparent: bool  # nothing can turn a carrier back
+    relaxed: Relaxed | None = None  # what relaxation and coupled probes need; None without them
 
     @property
     def cells(self):
@@ -106,9 +133,12 @@ def build(scenario):
     tables = _distinct([*transmissions, *(p.value for row in paths for p in row)])
     modes = scenario.channel.modes
     mode_tables = [modes] if _varies(modes) else []
-    bins = spectrum = None
+    bins = spectrum = relaxed = None
     share = np.ones(1)
-    if tables or mode_tables:
+    if needs_relaxation(scenario):
+        relaxed = _relaxed(scenario, window, nodes, transmissions, paths, tables)
+        functionals = _constant_functionals(float(modes), window)
+    elif tables or mode_tables:
         edges_meV = axis(window, [*tables, *mode_tables], scenario.simulation.energy_bins)
         bins = Bins(edges_meV, window.breaks())
         functionals = _binned_functionals(scenario, window, bins)
@@ -131,6 +161,74 @@ def build(scenario):
         is_section_edge=np.isin(nodes, _section_edges(scenario)),
         probe_node=np.searchsorted(nodes, [p.position_nm for p in scenario.probes]),
         transparent=not any(paths) and all(not _varies(t) and t == 1.0 for t in transmissions),
+        relaxed=relaxed,
+    )
+
+
+def needs_relaxation(scenario):
+    """Whether energies or directions change by more than elastic scattering."""
+    coupled = any(probe.coupling > 0.0 for probe in scenario.probes)
+    return coupled or bool(scenario.relaxation.mechanisms)
+
+
+def _relaxed(scenario, window, nodes, transmissions, paths, tables):
+    mechanisms = mechanisms_of(scenario)
+    axis_ = axis_of(scenario, window, mechanisms.phonon_meV)
+    bath = scenario.bath_temperature_K
+    probe_kelvin = np.full(nodes.size, bath)
+    for probe in scenario.probes:
+        if probe.temperature_K is not None:
+            probe_kelvin[np.searchsorted(nodes, probe.position_nm)] = probe.temperature_K
+    mu = window.mu_left_meV
+    k = BOLTZMANN_MEV_PER_K
+    setting = Setting(
+        mu_left=mu,
+        left_sign=-1.0 if mu < 0.0 else 1.0,
+        left_kT=k * window.temperature_left_K,
+        right_kT=k * window.temperature_right_K,
+        bath_kT=k * bath,
+        first_meV=axis_.first_meV,
+        step_meV=axis_.step_meV,
+        exact_energy=not tables and mechanisms.phonon_meV.size == 0,
+        carriers=bool(mechanisms.rates[KEPT_CARRIERS] or mechanisms.rates[RANDOM_CARRIERS]),
+        newton=0.0,
+        tangent=False,
+    )
+    return Relaxed(
+        axis=axis_,
+        setting=setting,
+        mechanisms=mechanisms,
+        probes=probes_of(scenario, nodes),
+        tables=_exact_tables(transmissions, paths, tables) if tables else None,
+        reference=reference(axis_, bath),
+        probe_kelvin=probe_kelvin,
+    )
+
+
+def _table_index(tables):
+    """A function from a value to the number of its table, -1 for a plain number."""
+    place = {(t.energy_meV, t.value): i for i, t in enumerate(tables)}
+    return lambda value: place[(value.energy_meV, value.value)] if _varies(value) else -1
+
+
+def _path_lists(paths, index):
+    """Path tables of each segment: first entry of each, and all their numbers."""
+    used = [[index(p.value) for p in row if _varies(p.value)] for row in paths]
+    first = np.concatenate([[0], np.cumsum([len(u) for u in used])]).astype(np.int64)
+    return first, np.array([i for row in used for i in row], np.int64)
+
+
+def _exact_tables(transmissions, paths, tables):
+    """Tables with all their entries, for carriers whose energy changes."""
+    index = _table_index(tables)
+    path_first, path_index = _path_lists(paths, index)
+    return Tables(
+        first=np.cumsum([0, *(len(t.energy_meV) for t in tables)]).astype(np.int64),
+        energy_meV=np.concatenate([t.energy_meV for t in tables]),
+        value=np.concatenate([t.value for t in tables]),
+        node_table=np.array([index(t) for t in transmissions], np.int64),
+        path_first=path_first,
+        path_index=path_index,
     )
 
 
@@ -204,24 +302,20 @@ def _distinct(values):
 
 def _spectrum(bins, share, transmissions, paths, tables):
     """The kernel's view of everything that depends on energy."""
-    place = {(t.energy_meV, t.value): i for i, t in enumerate(tables)}
-
-    def index(value):
-        return place[(value.energy_meV, value.value)] if _varies(value) else -1
-
+    index = _table_index(tables)
+    path_first, path_index = _path_lists(paths, index)
     values = np.empty((bins.count, max(len(tables), 1), 2))
     values[:] = [1.0, 0.0]
     for i, table in enumerate(tables):
         at_edges = at_energy(table, bins.edges)
         values[:, i, 0] = 0.5 * (at_edges[1:] + at_edges[:-1])
         values[:, i, 1] = np.diff(at_edges) / np.diff(bins.edges)
-    used = [[index(p.value) for p in row if _varies(p.value)] for row in paths]
     return Spectrum(
         edges_meV=bins.edges,
         cumulative=np.concatenate([[0.0], np.cumsum(share)[:-1], [1.0]]),
         node_table=np.array([index(t) for t in transmissions], np.int64),
-        path_first=np.concatenate([[0], np.cumsum([len(u) for u in used])]).astype(np.int64),
-        path_index=np.array([i for row in used for i in row], np.int64),
+        path_first=path_first,
+        path_index=path_index,
         values=values,
     )
 

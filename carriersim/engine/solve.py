@@ -78,10 +78,7 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
     stop = stop or StopRequest()
     simulation = problem.scenario.simulation
     batches = [new_stream(simulation.seed, b) for b in range(simulation.batches)]
-    offsets = [
-        np.uint64(int(streams.unit_offset(simulation.seed, b) * 2**64))
-        for b in range(simulation.batches)
-    ]
+    offsets = [offset_of(simulation.seed, b) for b in range(simulation.batches)]
     totals = _empty_totals(problem, simulation.batches)
     run = _batch_runner(problem, batches, offsets, stop)
     compile_for(problem)  # once, before threads start and the clock runs
@@ -127,14 +124,19 @@ def relative_error(problem, totals):
     return float(each.std(ddof=1) / np.sqrt(each.size) / abs(mean))
 
 
-def new_stream(seed, batch):
+def new_stream(seed, batch, purpose=streams.TRANSPORT):
     """Random numbers of one batch, at their beginning."""
-    lanes = streams.seed_lanes(seed, batch)
+    lanes = streams.seed_lanes(seed, batch, purpose)
     exponentials, uniforms = np.empty(streams.BLOCK), np.empty(streams.BLOCK)
     streams.fill_exponentials(lanes, exponentials)
     return flights.Stream(
         lanes, exponentials, uniforms, np.array([1, streams.BLOCK]), exponentials[:1].copy()
     )
+
+
+def offset_of(seed, batch):
+    """Shift of a batch's low-discrepancy sequence, uint64."""
+    return np.uint64(int(streams.unit_offset(seed, batch) * 2**64))
 
 
 def _empty_totals(problem, batches):

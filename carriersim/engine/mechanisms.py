@@ -1,0 +1,137 @@
+"""Relaxation: the arrays that describe it to the kernel, and the energy axis it needs."""
+
+from typing import NamedTuple
+
+import numpy as np
+
+from carriersim import fermi
+from carriersim.constants import BOLTZMANN_MEV_PER_K
+
+KEPT_BATH, RANDOM_BATH, KEPT_CARRIERS, RANDOM_CARRIERS = range(4)
+_INDEX = {
+    ("bath", "kept"): KEPT_BATH,
+    ("bath", "randomised"): RANDOM_BATH,
+    ("carriers", "kept"): KEPT_CARRIERS,
+    ("carriers", "randomised"): RANDOM_CARRIERS,
+}
+FINE = 16  # entries of the frozen reference per bin
+OVERSHOOT = 0.25  # occupations estimated outside 0..1 by more than this are cut when used as rates
+
+REACH_KT = 14.0  # the axis ends so far beyond the contacts: exp(-14) = 8e-7
+FINEST_KT = 2.0  # bins per kT
+MOST_BINS = 400
+FEWEST_BINS = 100
+
+
+class Mechanisms(NamedTuple):
+    """Relaxation along the whole channel; P optical phonons."""
+
+    rates: np.ndarray  # (4,) per nm, by kind and direction, see above
+    phonon_meV: np.ndarray  # (P,)
+    phonon_rate: np.ndarray  # (P,) per nm
+    phonon_number: np.ndarray  # (P,) of the lattice, Bose-Einstein
+    phonon_bound: np.ndarray  # (P,) per nm, no phonon event is more frequent
+    bath_meV: float  # k T_b
+    total: float  # per nm, sum of rates and bounds
+
+
+class Axis(NamedTuple):
+    """Even energy bins; bin b is [first + b step, first + (b+1) step]."""
+
+    first_meV: float
+    step_meV: float
+    bins: int
+
+
+class Probes(NamedTuple):
+    """Coupled voltage probes by node; a node without one absorbs nobody. Shapes (K,)."""
+
+    from_left: np.ndarray  # chance to absorb a carrier that moves right
+    from_right: np.ndarray
+    emits_right: np.ndarray  # chance to emit it rightward
+
+
+def mechanisms_of(scenario):
+    """Mechanisms of a scenario; rates of equal kind add."""
+    rates = np.zeros(4)
+    phonons = []
+    kT = BOLTZMANN_MEV_PER_K * scenario.bath_temperature_K
+    for mechanism in scenario.relaxation.mechanisms:
+        if mechanism.kind == "optical_phonon":
+            energy = mechanism.energy_meV
+            number = 1.0 / np.expm1(energy / kT) if kT > 0.0 else 0.0
+            phonons.append((energy, 1.0 / mechanism.path_nm, number))
+        else:
+            direction = mechanism.direction or "kept"
+            rates[_INDEX[mechanism.kind, direction]] += 1.0 / mechanism.path_nm
+    energy, rate, number = np.array(phonons).reshape(-1, 3).T.copy()
+    # Down (N + 1 - f) and up (N + f), f of the final state between -OVERSHOOT and 1 + OVERSHOOT.
+    bound = rate * (2.0 * number + 2.0 + 2.0 * OVERSHOOT)
+    return Mechanisms(
+        rates=rates,
+        phonon_meV=energy,
+        phonon_rate=rate,
+        phonon_number=number,
+        phonon_bound=bound,
+        bath_meV=kT,
+        total=float(rates.sum() + bound.sum()),
+    )
+
+
+def probes_of(scenario, nodes_nm):
+    """Coupled probes of a scenario at its nodes."""
+    from_left, from_right = np.zeros(nodes_nm.size), np.zeros(nodes_nm.size)
+    emits_right = np.full(nodes_nm.size, 0.5)
+    for probe in scenario.probes:
+        node = np.searchsorted(nodes_nm, probe.position_nm)
+        from_left[node] = min(1.0, 2.0 * probe.weight_right * probe.coupling)
+        from_right[node] = min(1.0, 2.0 * (1.0 - probe.weight_right) * probe.coupling)
+        emits_right[node] = probe.weight_right
+    return Probes(from_left, from_right, emits_right)
+
+
+def axis_of(scenario, window, phonons_meV):
+    """Even bins over all energies that matter; their step divides the first phonon's energy."""
+    mu = window.mu_left_meV
+    kelvin = [window.temperature_left_K, window.temperature_right_K, scenario.bath_temperature_K]
+    hottest = BOLTZMANN_MEV_PER_K * max(kelvin)
+    low, high = min(mu, 0.0) - REACH_KT * hottest, max(mu, 0.0) + REACH_KT * hottest
+    if phonons_meV.size:
+        low, high = low - phonons_meV.max(), high + phonons_meV.max()
+    elif mu:
+        low, high = low - 0.3 * abs(mu), high + 0.3 * abs(mu)
+    if low == high:
+        low, high = -1.0, 1.0
+    asked = scenario.simulation.energy_bins
+    wanted = asked or min(
+        MOST_BINS, max(FEWEST_BINS, (high - low) * FINEST_KT / max(hottest, 1e-9))
+    )
+    step = (high - low) / wanted
+    if phonons_meV.size:
+        step = phonons_meV[0] / max(1, round(phonons_meV[0] / step))
+    elif mu and abs(mu) > 4 * step:
+        step = abs(mu) / round(abs(mu) / step)  # an edge at each contact's potential
+    first = np.floor(low / step) * step
+    return Axis(float(first), float(step), int(np.ceil((high - first) / step)))
+
+
+def reference(axis, kelvin, parts=1):
+    """F_r averaged over parts of bins, (B parts,): right contact's mu, lattice temperature."""
+    axis = Axis(axis.first_meV, axis.step_meV / parts, axis.bins * parts)
+    edges = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
+    kT = BOLTZMANN_MEV_PER_K * kelvin
+    if kT == 0.0:
+        return np.clip(-edges[:-1] / axis.step_meV, 0.0, 1.0)
+    softplus = kT * np.logaddexp(0.0, -edges / kT)  # its slope is -F
+    return -np.diff(softplus) / axis.step_meV
+
+
+def heat_strength(kelvin, bath_kelvin):
+    """Pairs per mode and energy of F(mu, T) - F(mu, T_b): k |T - T_b| ln 2, in meV."""
+    return BOLTZMANN_MEV_PER_K * np.abs(kelvin - bath_kelvin) * np.log(2.0)
+
+
+def temperatures(number_meV, energy_meV2, bath_kelvin):
+    """T_e in K from the deviations' number and energy about the reference."""
+    background = (np.pi * BOLTZMANN_MEV_PER_K * bath_kelvin) ** 2 / 6.0
+    return fermi.carrier_temperature(number_meV, background + energy_meV2)

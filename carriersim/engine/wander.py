@@ -1,0 +1,467 @@
+"""The particle kernel with relaxation, one dimension.
+
+A particle stands for a piece of the deviation from the reference occupation F(E; mu_R, T_b); its
+sign is +1 or -1, its energy changes in events. Frozen fields (potentials, occupations) come from
+earlier rounds. Positions count cell widths inside a segment; energies are exact, bins only for the
+tallies and for frozen occupations.
+"""
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from carriersim.engine.events import GOLDEN, passes_at, varying_rate
+from carriersim.engine.flights import DONE, STOPPED, TOO_MANY_EVENTS
+from carriersim.engine.mechanisms import FINE, KEPT_BATH, OVERSHOOT, RANDOM_BATH, RANDOM_CARRIERS
+from carriersim.engine.streams import BLOCK, fill_exponentials, fill_uniforms, minus_log
+
+# What a source emits; the order of Sources.share.
+LEFT_NUMBER, LEFT_HEAT, RIGHT_HEAT, PROBE_HEAT, CARRIER_HEAT, PHONON_PAIR = range(6)
+SOURCES = 6
+# Columns of Tally.cells for each direction: number, energy, and energy that carriers events keep,
+# each as (signed number of flight ends, sum of their places).
+NUMBER, ENERGY, KEPT_ENERGY = 0, 2, 4
+# Rows of Tally.scalars.
+OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS = range(4)
+# What happens to a particle; BORN: it starts its first flight.
+NOTHING, CHANGED, GONE, BORN = range(4)
+
+
+class Frozen(NamedTuple):
+    """Fields of earlier rounds; C cells, B bins, K nodes."""
+
+    mu: np.ndarray  # (3, C) right-moving, left-moving, mean, in meV
+    temperature: np.ndarray  # (3, C) k T_e in meV
+    probe_mu: np.ndarray  # (K,) meV
+    probe_kT: np.ndarray  # (K,) meV
+    occupation: np.ndarray  # (2, B, C) right, left
+    reference: np.ndarray
+
+
+class Sources(NamedTuple):
+    """Where particles come from; shares are cumulative and end at 1."""
+
+    share: np.ndarray  # (SOURCES,)
+    probe: np.ndarray  # (K,) over nodes
+    carriers: np.ndarray  # (3 C,) over direction (right, left, random) and cell
+    pair: np.ndarray  # (n,) over the phonon pairs listed below
+    pair_place: np.ndarray  # (n,) int32: cell
+    pair_bin: np.ndarray  # (n,) int32: bin of the lower state
+    pair_kind: np.ndarray  # (n,) int8: bits 0 upper leftward, 1 lower leftward, 2 negative, 3 late
+    pair_phonon: np.ndarray  # (n,) int8
+
+
+class Setting(NamedTuple):
+    """Numbers of a run that the kernel needs."""
+
+    mu_left: float
+    left_sign: float  # of the number that the left contact emits
+    left_kT: float
+    right_kT: float
+    bath_kT: float
+    first_meV: float
+    step_meV: float
+    exact_energy: bool  # no event depends on energy: kept energies are exact
+    carriers: bool  # carriers events happen, so kept energies differ from energies
+    newton: float  # weight of Newton's form of the phonon terms, 0 to 1
+    tangent: bool  # follow a small change of the bias instead of the deviation itself
+
+
+class Tally(NamedTuple):
+    """What the kernel adds to."""
+
+    bins: np.ndarray  # (B, C, 4): right (ends, places), left (ends, places)
+    cells: np.ndarray  # (C, 12): right 6 columns, left 6 columns
+    arrivals: np.ndarray  # (K, 2) signed arrivals from the left, from the right
+    departures: np.ndarray  # (K, 2) signed departures to the right, to the left
+    heat: np.ndarray  # (C,) energy given to the lattice
+    probe_heat: np.ndarray  # (K,)
+    turned: np.ndarray  # (C,) directed flux destroyed by phonons
+    scalars: np.ndarray  # (4,)
+
+
+@njit(cache=True, error_model="numpy", forceinline=True)
+def _uniform(uniforms, lanes, position):
+    """One uniform number in (0, 1]."""
+    q = position[1]
+    if q == BLOCK:
+        fill_uniforms(lanes, uniforms)
+        q = 0
+    position[1] = q + 1
+    return uniforms[q] + 1.1102230246251565e-16
+
+
+@njit(cache=True, error_model="numpy", forceinline=True)
+def _box(mu, kT, u, v):
+    """Energy of the deviation F(mu) - F(0): uniform between the potentials, smeared by kT."""
+    energy = mu * u
+    if kT > 0.0:
+        energy += kT * (minus_log(1.0 - v) - minus_log(v))
+    return energy
+
+
+@njit(cache=True, error_model="numpy", forceinline=True)
+def _heat_energy(kT, bath_kT, uniforms, lanes, position):
+    """Distance from mu of a member of F(mu, T) - F(mu, T_b).
+
+    The difference is an integral over temperatures between the two of z sech^2(z/2)/4, z = e/kT:
+    a gamma variable, accepted with probability 1/(1 + exp(-z))^2 (ln 2 on average).
+    """
+    between = bath_kT + (kT - bath_kT) * _uniform(uniforms, lanes, position)
+    while True:
+        product = _uniform(uniforms, lanes, position) * _uniform(uniforms, lanes, position)
+        z = minus_log(product)
+        if _uniform(uniforms, lanes, position) * (1.0 + product) ** 2 < 1.0:
+            return between * z
+
+
+class Particles(NamedTuple):
+    """One or two particles that a source emits."""
+
+    place: np.ndarray  # (2,) int64: its segment; for a particle at a node: the node
+    numbers: np.ndarray  # (2, 5): place in the segment (cells), energy, kept energy, sign, heat
+    flags: np.ndarray  # (2, 2) bool: moves right; starts at a node
+
+
+@njit(cache=True, error_model="numpy", forceinline=True)
+def _put(start, member, segment, place, energy, kept, sign, heat, right, at_node):
+    start.place[member] = segment
+    start.numbers[member, 0] = place
+    start.numbers[member, 1] = energy
+    start.numbers[member, 2] = kept
+    start.numbers[member, 3] = sign
+    start.numbers[member, 4] = heat
+    start.flags[member, 0] = right
+    start.flags[member, 1] = at_node
+
+
+@njit(cache=True, error_model="numpy", forceinline=True)
+def _segment_of(geometry, cell):
+    return np.searchsorted(geometry.first_cell, cell, side="right") - 1
+
+
+@njit(cache=True, error_model="numpy")
+def _emit(
+    kind, rest, geometry, mechanisms, probes, frozen, sources, setting, uniforms, lanes, position,
+    tally, start,
+):  # fmt: skip
+    """Draw from a source; returns the number of particles put into start (1 or 2).
+
+    rest: uniform number left over from choosing the source.
+    """
+    last = geometry.transmission.size - 1
+    if kind == PHONON_PAIR:
+        return _emit_pair(rest, geometry, mechanisms, sources, setting, uniforms, lanes, position,
+                          tally, start)  # fmt: skip
+    if kind == LEFT_HEAT or kind == RIGHT_HEAT:
+        left = kind == LEFT_HEAT
+        mu, kT = (setting.mu_left, setting.left_kT) if left else (0.0, setting.right_kT)
+        segment, place, right, at_node, heat = (0 if left else last), 0.0, left, True, 1.0
+    elif kind == PROBE_HEAT:
+        segment = min(np.searchsorted(sources.probe, rest, side="right"), last)
+        mu, kT = frozen.probe_mu[segment], frozen.probe_kT[segment]
+        place, at_node, heat = 0.0, True, 2.0
+        right = _uniform(uniforms, lanes, position) < probes.emits_right[segment]
+    else:
+        entry = min(
+            np.searchsorted(sources.carriers, rest, side="right"), sources.carriers.size - 1
+        )
+        cells = frozen.mu.shape[1]
+        which, cell = entry // cells, entry % cells
+        mu, kT = frozen.mu[which, cell], frozen.temperature[which, cell]
+        segment = _segment_of(geometry, cell)
+        place = cell - geometry.first_cell[segment] + _uniform(uniforms, lanes, position)
+        right = which == 0 or (which == 2 and _uniform(uniforms, lanes, position) < 0.5)
+        at_node, heat = False, 1.0
+    away = _heat_energy(kT, setting.bath_kT, uniforms, lanes, position)
+    sign = 1.0 if kT > setting.bath_kT else -1.0
+    for member in range(2):
+        energy = mu + away if member == 0 else mu - away
+        charge = sign if member == 0 else -sign
+        kept = energy
+        if kind == CARRIER_HEAT and setting.exact_energy:
+            kept = 0.0
+        if kind == PROBE_HEAT:
+            tally.probe_heat[segment] -= charge * energy
+        elif kind == LEFT_HEAT:
+            tally.scalars[ENERGY_LEFT] += charge * energy
+        elif kind == RIGHT_HEAT:
+            tally.scalars[ENERGY_RIGHT] -= charge * energy
+        _put(start, member, segment, place, energy, kept, charge, heat, right, at_node)
+    return 2
+
+
+@njit(cache=True, error_model="numpy")
+def _emit_pair(
+    rest, geometry, mechanisms, sources, setting, uniforms, lanes, position, tally, start
+):  # fmt: skip
+    """Newton's pair source: + in the lower state, - in the upper one, times the pair's sign."""
+    entry = min(np.searchsorted(sources.pair, rest, side="right"), sources.pair.size - 1)
+    cell, kind = sources.pair_place[entry], sources.pair_kind[entry]
+    w = mechanisms.phonon_meV[sources.pair_phonon[entry]]
+    # Where the step does not divide w the upper state lies in one of two bins: early or late part.
+    shift = w / setting.step_meV - np.floor(w / setting.step_meV)
+    u = _uniform(uniforms, lanes, position)
+    part = 1.0 - shift + shift * u if kind & 8 else (1.0 - shift) * u
+    energy = setting.first_meV + (sources.pair_bin[entry] + part) * setting.step_meV
+    segment = _segment_of(geometry, cell)
+    place = cell - geometry.first_cell[segment] + _uniform(uniforms, lanes, position)
+    sign = -1.0 if kind & 4 else 1.0
+    tally.heat[cell] += sign * w
+    _put(start, 0, segment, place, energy, energy, sign, 0.0, not kind & 2, False)
+    upper = energy + w
+    _put(start, 1, segment, place, upper, upper, -sign, 0.0, not kind & 1, False)
+    return 2
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def wander(
+    first, histories, offset, geometry, tables, mechanisms, probes, frozen, sources, setting,
+    stream, tally, stop, event_limit,
+):  # fmt: skip
+    """Follow `histories` draws from the sources, each to its end; returns the kernel's outcome.
+
+    Arguments as for flights.fly. A draw of a heat or phonon source makes a pair of particles of
+    opposite sign, followed one after the other.
+    """
+    # One function with its arrays at hand: see flights.fly.
+    lanes, uniforms, position = stream.lanes, stream.uniforms, stream.position
+    exponentials = stream.exponentials
+    bins, cells, scalars = tally.bins, tally.cells, tally.scalars
+    arrivals, departures = tally.arrivals, tally.departures
+    heat, probe_heat, turned = tally.heat, tally.probe_heat, tally.turned
+    first_cell, cell_count = geometry.first_cell, geometry.cells
+    thickness = geometry.thickness
+    cell_nm = geometry.length_nm / geometry.cells
+    mu, occupation, probe_mu = frozen.mu, frozen.occupation, frozen.probe_mu
+    from_left, from_right, emits_right = probes.from_left, probes.from_right, probes.emits_right
+    rates, total = mechanisms.rates, mechanisms.total
+    phonon_meV, phonon_number = mechanisms.phonon_meV, mechanisms.phonon_number
+    phonon_rate, phonon_bound = mechanisms.phonon_rate, mechanisms.phonon_bound
+    share = sources.share
+    reference = frozen.reference
+    fine_per_meV = FINE / setting.step_meV
+    last = geometry.transmission.size - 1
+    top = bins.shape[0]
+    start = Particles(np.zeros(2, np.int64), np.zeros((2, 5)), np.zeros((2, 2), np.bool_))
+    origin, numbers, flags = start.place, start.numbers, start.flags
+    p, q = position[0], position[1]
+    tau = 0.0
+    made = 0
+    for history in range(first, first + histories):
+        quantile = np.float64(offset + np.uint64(history) * GOLDEN) * 2.0**-64
+        kind = min(np.searchsorted(share, quantile, side="right"), SOURCES - 1)
+        below = share[kind - 1] if kind > 0 else 0.0
+        rest = (quantile - below) / (share[kind] - below)
+        if kind == LEFT_NUMBER:  # most draws: without a call
+            if q == BLOCK:
+                fill_uniforms(lanes, uniforms)
+                q = 0
+            u, kT = (1.0, setting.left_kT) if setting.tangent else (rest, setting.bath_kT)
+            new = _box(setting.mu_left, kT, u, uniforms[q])
+            q += 1
+            scalars[ENERGY_LEFT] += setting.left_sign * new
+            origin[0] = 0
+            numbers[0, 1] = numbers[0, 2] = new
+            numbers[0, 3], numbers[0, 4] = setting.left_sign, 0.0
+            flags[0, 0] = flags[0, 1] = True
+            members = 1
+        else:
+            position[1] = q
+            members = _emit(
+                kind, rest, geometry, mechanisms, probes, frozen, sources, setting, uniforms,
+                lanes, position, tally, start,
+            )  # fmt: skip
+            q = position[1]
+        for member in range(members):
+            node = segment = origin[member]
+            y, energy, kept = numbers[member, 0], numbers[member, 1], numbers[member, 2]
+            sign, warm = numbers[member, 3], numbers[member, 4] > 0.0
+            right, at_node = flags[member, 0], flags[member, 1]
+            emitted = numbers[member, 4] == 2.0  # by a probe: does not arrive there
+            forgets = warm and setting.exact_energy
+            budget = event_limit
+            bin_ = np.int64(np.floor((energy - setting.first_meV) / setting.step_meV))
+            if at_node:
+                cell = first_cell[node] if node < last else cells.shape[0] - 1
+                part = 0.0 if node < last else 1.0
+            else:
+                inner = min(np.int64(y), cell_count[segment] - 1)
+                cell, part = first_cell[segment] + inner, y - inner
+            outcome = BORN
+            new, new_kept, onward = energy, kept, right
+            if p >= BLOCK:
+                fill_exponentials(lanes, exponentials)
+                p = 0
+            tau = exponentials[p]
+            p += 1
+            while True:
+                # The flight that ends here, and the one that starts.
+                if outcome != BORN:
+                    step = sign if right else -sign
+                    column = 0 if right else 2
+                    if 0 <= bin_ < top:
+                        bins[bin_, cell, column] += step
+                        bins[bin_, cell, column + 1] += step * part
+                    column *= 3
+                    cells[cell, column] += step
+                    cells[cell, column + 1] += step * part
+                    cells[cell, column + 2] += step * energy
+                    cells[cell, column + 3] += step * energy * part
+                    if setting.carriers:
+                        cells[cell, column + 4] += step * kept
+                        cells[cell, column + 5] += step * kept * part
+                    if outcome == GONE:
+                        break
+                    energy, kept, right = new, new_kept, onward
+                    bin_ = np.int64(np.floor((energy - setting.first_meV) / setting.step_meV))
+                step = -sign if right else sign
+                column = 0 if right else 2
+                if 0 <= bin_ < top:
+                    bins[bin_, cell, column] += step
+                    bins[bin_, cell, column + 1] += step * part
+                column *= 3
+                cells[cell, column] += step
+                cells[cell, column + 1] += step * part
+                cells[cell, column + 2] += step * energy
+                cells[cell, column + 3] += step * energy * part
+                if setting.carriers:
+                    cells[cell, column + 4] += step * kept
+                    cells[cell, column + 5] += step * kept * part
+                outcome = NOTHING
+                while outcome == NOTHING:
+                    if q > BLOCK - 8:  # an event uses fewer
+                        budget -= BLOCK
+                        if stop[0]:
+                            return STOPPED
+                        if budget < 0:
+                            return TOO_MANY_EVENTS
+                        fill_uniforms(lanes, uniforms)
+                        q = 0
+                    if at_node:
+                        # A scatterer lets pass or turns round, a probe may absorb.
+                        at_node = False
+                        new, new_kept, onward = energy, kept, right
+                        if not emitted:
+                            made += 1
+                            arrivals[node, 0 if right else 1] += sign
+                            chance = passes_at(node, energy, geometry, tables)
+                            if chance < 1.0:
+                                if uniforms[q] >= chance:
+                                    outcome, onward = CHANGED, not right
+                                q += 1
+                            taken = from_left[node] if right else from_right[node]
+                            if taken > 0.0:
+                                if uniforms[q] < taken:
+                                    probe_heat[node] += sign * kept
+                                    if forgets:  # its partner is taken too, and comes back alike
+                                        outcome = GONE
+                                        q += 1
+                                        break
+                                    u = 1.0 if setting.tangent else uniforms[q + 1]
+                                    new = _box(probe_mu[node], setting.bath_kT, u, uniforms[q + 2])
+                                    new_kept = new
+                                    probe_heat[node] -= sign * new
+                                    onward = uniforms[q + 3] < emits_right[node]
+                                    outcome = CHANGED
+                                    q += 3
+                                q += 1
+                        emitted = False
+                        departures[node, 0 if onward else 1] += sign
+                        if node == (last if onward else 0):
+                            if onward:
+                                scalars[OUT_RIGHT] += sign
+                                scalars[ENERGY_RIGHT] += sign * new_kept
+                            else:
+                                scalars[ENERGY_LEFT] -= sign * new_kept
+                            outcome = GONE
+                            break
+                        segment = node if onward else node - 1
+                        y = 0.0 if onward else np.float64(cell_count[segment])
+                        continue
+                    # On through the segment: to its end or to the next event.
+                    elastic = thickness[segment] / (cell_nm[segment] * cell_count[segment])
+                    if tables is not None:
+                        elastic += varying_rate(segment, energy, tables)
+                    rate = (elastic + total) * cell_nm[segment]
+                    ahead = cell_count[segment] - y if right else y
+                    if tau >= rate * ahead:
+                        tau -= rate * ahead
+                        node = segment + 1 if right else segment
+                        part = 1.0 if right else 0.0
+                        cell = first_cell[segment] + (cell_count[segment] - 1 if right else 0)
+                        at_node = True
+                        continue
+                    y += tau / rate if right else -tau / rate
+                    if p >= BLOCK:
+                        fill_exponentials(lanes, exponentials)
+                        p = 0
+                    tau = exponentials[p]
+                    p += 1
+                    made += 1
+                    inner = min(max(np.int64(y), 0), cell_count[segment] - 1)
+                    cell, part = first_cell[segment] + inner, y - inner
+                    v = (elastic + total) * uniforms[q] - elastic
+                    q += 1
+                    new, new_kept, onward = energy, kept, right
+                    if v < 0.0:
+                        outcome, onward = CHANGED, not right
+                        continue
+                    which = 0
+                    while which < 4 and v >= rates[which]:
+                        v -= rates[which]
+                        which += 1
+                    if which < 4:
+                        to_bath = which == KEPT_BATH or which == RANDOM_BATH
+                        if forgets and (to_bath or kept == 0.0):  # both partners go on alike
+                            if to_bath:
+                                heat[cell] += sign * kept
+                            outcome = GONE
+                            continue
+                        randomised = which == RANDOM_BATH or which == RANDOM_CARRIERS
+                        field = 2 if randomised else (0 if right else 1)
+                        u = 1.0 if setting.tangent else uniforms[q]
+                        new = _box(mu[field, cell], setting.bath_kT, u, uniforms[q + 1])
+                        if to_bath:
+                            heat[cell] += sign * (kept - new)
+                        if to_bath or not setting.exact_energy:
+                            new_kept = new
+                        if randomised:
+                            onward = uniforms[q + 2] < 0.5
+                        q += 3
+                        outcome = CHANGED
+                        continue
+                    # Phonons: Newton's rates, down (N + 1 - f)/2 and up (N + f)/2 for each final
+                    # direction, f the frozen occupation there; full below the axis, empty above.
+                    k = 0
+                    while k < phonon_meV.size - 1 and v >= phonon_bound[k]:
+                        v -= phonon_bound[k]
+                        k += 1
+                    v /= 0.5 * phonon_rate[k]
+                    most = phonon_number[k] + 1.0 + OVERSHOOT
+                    for choice in range(4):
+                        change = -phonon_meV[k] if choice < 2 else phonon_meV[k]
+                        place = np.int64(
+                            np.floor((energy + change - setting.first_meV) / setting.step_meV)
+                        )
+                        fine = np.int64((energy + change - setting.first_meV) * fine_per_meV)
+                        f = 1.0 if place < 0 else 0.0
+                        if 0 <= place < top:
+                            f = reference[fine]
+                            d = occupation[choice & 1, place, cell]
+                            f += d if choice < 2 else setting.newton * d
+                        chance = phonon_number[k] + (1.0 - f if choice < 2 else f)
+                        v -= min(max(chance, 0.0), most)
+                        if v < 0.0:
+                            new = energy + change
+                            new_kept = new
+                            onward = choice & 1 == 0
+                            heat[cell] -= sign * change
+                            if onward != right:
+                                turned[cell] += sign if right else -sign
+                            outcome = CHANGED
+                            break
+    position[0], position[1] = p, q
+    scalars[FLIGHTS] += made
+    return DONE
