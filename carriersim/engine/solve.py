@@ -7,6 +7,7 @@ fixed order. So the result depends on the seed, not on the number of workers.
 
 import time
 from dataclasses import dataclass
+from itertools import chain
 
 import numpy as np
 from joblib import Parallel, delayed
@@ -17,6 +18,7 @@ FIRST_ROUND = 16  # histories of each batch in the first round
 FIRST_ROUND_BINNED = 160  # the same with several energies, where adding up a round costs more
 GROWTH = 0.6  # a round adds at most this share of the histories so far
 ROUND_FLIGHTS = 6e7  # at most about this many flights in a round: half a second on one core
+CHUNKS = 6  # pieces of a round for each worker
 EVENT_LIMIT = 10**10  # random numbers that one history may use before the run is given up
 FEW_EVENTS = 200  # both outcomes must have been seen this often before an error is believed
 MANY_HISTORIES = 4_000_000  # an outcome not seen in so many histories doesn't matter
@@ -83,7 +85,7 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
     run = _batch_runner(problem, batches, offsets, stop)
     compile_for(problem)  # once, before threads start and the clock runs
     begin = time.perf_counter()
-    with Parallel(n_jobs=workers, prefer="threads", return_as="generator") as pool:
+    with Parallel(n_jobs=workers, prefer="threads", return_as="generator", batch_size=1) as pool:
         while not totals.stopped_by:
             sizes = _next_round(totals, goal, problem)
             try:
@@ -126,12 +128,14 @@ def relative_error(problem, totals):
 
 def new_stream(seed, batch, purpose=streams.TRANSPORT):
     """Random numbers of one batch, at their beginning."""
-    lanes = streams.seed_lanes(seed, batch, purpose)
-    exponentials, uniforms = np.empty(streams.BLOCK), np.empty(streams.BLOCK)
+    lanes = streams.apart((4 * streams.BLOCK,), np.uint64)
+    lanes[:] = streams.seed_lanes(seed, batch, purpose)
+    exponentials, uniforms = streams.apart((streams.BLOCK,)), streams.apart((streams.BLOCK,))
     streams.fill_exponentials(lanes, exponentials)
-    return flights.Stream(
-        lanes, exponentials, uniforms, np.array([1, streams.BLOCK]), exponentials[:1].copy()
-    )
+    position, flight = streams.apart((2,), np.int64), streams.apart((1,))
+    position[:] = 1, streams.BLOCK
+    flight[0] = exponentials[0]
+    return flights.Stream(lanes, exponentials, uniforms, position, flight)
 
 
 def offset_of(seed, batch):
@@ -196,7 +200,9 @@ def _one_round(problem, totals, sizes, run, pool, workers):
     if workers == 1:
         results = (run(*task) for task in tasks)
     else:
-        results = pool(delayed(run)(*task) for task in tasks)
+        results = chain.from_iterable(
+            pool(delayed(_several)(run, tasks[chunk]) for chunk in _chunks(len(tasks), workers))
+        )
     samples = []
     sums = None
     if totals.field_sum is not None:
@@ -225,6 +231,16 @@ def _one_round(problem, totals, sizes, run, pool, workers):
     totals.samples += len(samples)
     totals.rounds += 1
     return True
+
+
+def _chunks(tasks, workers):
+    """Slices of tasks, a few for each worker: handing over each batch alone costs too much."""
+    size = max(1, -(-tasks // (CHUNKS * workers)))
+    return [slice(start, start + size) for start in range(0, tasks, size)]
+
+
+def _several(run, tasks):
+    return [run(*task) for task in tasks]
 
 
 def _next_round(totals, goal, problem):

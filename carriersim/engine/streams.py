@@ -34,6 +34,17 @@ _L5 = 0.15331710618210773
 _L6 = 0.14616585424888623
 
 
+def apart(shape, dtype=np.float64):
+    """Zeros that share no cache line with other arrays.
+
+    Small arrays that several threads write to would otherwise slow each other down (two workers
+    reached 1.3 times the speed of one).
+    """
+    margin = 256 // np.dtype(dtype).itemsize
+    size = int(np.prod(shape))
+    return np.zeros(size + 2 * margin, dtype)[margin : margin + size].reshape(shape)
+
+
 def seed_lanes(seed, batch, purpose=TRANSPORT):
     """State of the lanes for one batch, shape (4 * BLOCK,), uint64, from (seed, purpose, batch)."""
     sequence = np.random.SeedSequence(seed, spawn_key=(purpose, batch))

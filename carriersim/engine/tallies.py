@@ -10,6 +10,7 @@ import numpy as np
 from numba import njit
 
 from carriersim.engine.flights import TURNS, Counts
+from carriersim.engine.streams import apart
 
 
 @dataclass
@@ -32,10 +33,10 @@ def empty_counts(problem):
     """Counts at zero for one call of the kernel."""
     bins, nodes = problem.share.size, problem.nodes_nm.size
     return Counts(
-        turns=np.zeros((bins, problem.cells, 2)),
-        arrivals=np.zeros((bins, nodes, 2)),
-        transmitted=np.zeros(bins),
-        work=np.zeros(3, np.int64),
+        turns=apart((bins, problem.cells, 2)),
+        arrivals=apart((bins, nodes, 2)),
+        transmitted=apart((bins,)),
+        work=apart((3,), np.int64),
     )
 
 
