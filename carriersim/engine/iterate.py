@@ -2,8 +2,8 @@
 
 What particles meet (potentials, temperatures, occupations) comes from the rounds before. Potentials
 and temperatures belong to each batch, so that batches stay independent and their spread is the
-whole error; occupations, which enter the phonon rates in Newton's form and so have no first-order
-effect at the solution, are shared, because their noise leaves a bias that falls with all histories.
+whole error; occupations, which enter the phonon rates, are shared, because their noise leaves a
+bias that falls with all histories.
 
 Rounds come in windows; the histories of a round double from window to window. Fields are averages
 over all rounds, weighted with histories and with the number of the round, so that the start is
@@ -19,7 +19,7 @@ from joblib import Parallel, delayed
 from numba import njit
 
 from carriersim.constants import BOLTZMANN_MEV_PER_K
-from carriersim.engine import streams
+from carriersim.engine import streams, tallies
 from carriersim.engine import wander as w
 from carriersim.engine.flights import DONE
 from carriersim.engine.mechanisms import (
@@ -127,21 +127,6 @@ def spread_bins(bins, scale, field_):
             field_[1, b, c] = scale * (left + bins[b, c, 3])
             right += bins[b, c, 0]
             left += bins[b, c, 2]
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def add_square(field_, histories, total, square):
-    """Add a sample to sums of f+, f- and their mean, weighted with histories."""
-    for b in range(field_.shape[1]):
-        for c in range(field_.shape[2]):
-            right, left = field_[0, b, c], field_[1, b, c]
-            mean = 0.5 * (right + left)
-            total[0, b, c] += histories * right
-            total[1, b, c] += histories * left
-            total[2, b, c] += histories * mean
-            square[0, b, c] += histories * right * right
-            square[1, b, c] += histories * left * left
-            square[2, b, c] += histories * mean * mean
 
 
 def spread_cells(cells):
@@ -308,7 +293,7 @@ class Rounds:
             if result is None:
                 complete = False
             elif complete:
-                add_square(result.pop("field"), size, field_sum, field_square)
+                tallies.add_field(size * result.pop("field"), size, field_sum, field_square)
                 kept.append(result)
         if not complete:
             return 0, False

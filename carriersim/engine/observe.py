@@ -24,10 +24,8 @@ class Observer:
         self.degeneracy = problem.scenario.channel.degeneracy
         self.full = 1.0 if self.window.linear else self.window.mu_left_meV
         f = problem.functionals
-        if self.window.linear or self.window.same_temperature:
-            self.drive = f.bias_slope if self.window.linear else f.current
-        else:
-            self.drive = f.bias_slope
+        at_bias = self.window.same_temperature and not self.window.linear
+        self.drive = f.current if at_bias else f.bias_slope
         self.ballistic_ohm = 1e-3 / (AMPERE_PER_MEV * self.degeneracy * f.mean_modes)
         # The output grid; with several bins it is the run's own, each cut into `finer` parts.
         self.finer = 1

@@ -8,7 +8,6 @@ from itertools import pairwise
 
 import numpy as np
 
-from carriersim import fermi
 from carriersim.constants import BOLTZMANN_MEV_PER_K
 from carriersim.engine.energies import Bins, Window, axis, shares
 from carriersim.engine.events import Tables
@@ -407,8 +406,3 @@ def _spread(bins, transmissions, paths, length_nm):
         for path in row:
             resistance += stretch * path.rate_per_nm(bins.centres)
     return np.maximum(np.sqrt(resistance - 1.0) / resistance, 0.5 * LEAST_SPREAD)
-
-
-def equilibrium_right(problem, energy_meV):
-    """F_R on given energies; the reference that deviations are counted from."""
-    return fermi.occupation(energy_meV, 0.0, problem.window.temperature_right_K)

@@ -297,7 +297,8 @@ def wander(
             tau = exponentials[p]
             p += 1
             while True:
-                # The flight that ends here, and the one that starts.
+                # The flight that ends here, and the one that starts: written out twice, because a
+                # function that takes the tallies costs more than the adding.
                 if outcome != BORN:
                     step = sign if right else -sign
                     column = 0 if right else 2
