@@ -107,10 +107,11 @@ def _not_below_one_event(error, value, totals, problem):
 
 def _reasons(problem, numbers):
     """Why some quantities are null; keys are those of summary.json."""
-    why = {"noise": NOT_ASKED, "residual": NO_ITERATION}
+    why = {"noise": NOT_ASKED}
+    why |= dict.fromkeys(("residual", "drift", "drift_sigma"), NO_ITERATION)
     window = problem.window
     if window.linear:
-        why |= {"current_A": LINEAR, "heat_W": LINEAR}
+        why |= {"current_A": LINEAR, "heat_W": LINEAR, "lattice_power_W_per_nm": LINEAR}
         if window.same_temperature:
             why["thermal.heat_current_left_W"] = why["thermal.heat_current_right_W"] = LINEAR
     if not window.same_temperature:
@@ -248,6 +249,8 @@ def _fields(problem, observer, totals, batches):
     value |= dict(zip(names, occupations, strict=True))
     error |= dict(zip(names, errors, strict=True))
     value["departure"], error["departure"] = departure, departure_error
+    power = np.full(problem.cells, np.nan if problem.window.linear else 0.0)
+    value["lattice_power_W_per_nm"] = error["lattice_power_W_per_nm"] = power
     edges = problem.cell_edges_nm
     return value | {
         "x_nm": 0.5 * (edges[1:] + edges[:-1]),

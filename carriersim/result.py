@@ -28,8 +28,9 @@ class Estimate:
 class Part:
     """One part of the resistance. kind: interface, point, probe or piece.
 
-    A piece lies between from_nm and to_nm and belongs to one mechanism (the name of a path, or
-    'ballistic' where nothing scatters); every other kind sits at position_nm.
+    A piece lies between from_nm and to_nm and belongs to one mechanism: the name of a path,
+    'ballistic' where nothing scatters, or for relaxation that turns carriers round 'bath',
+    'carriers' or 'optical phonon 160 meV'. Every other kind sits at position_nm.
     """
 
     name: str
@@ -149,7 +150,16 @@ class Result:
     carrier_temperature_minus_K: np.ndarray
     carrier_temperature_K: np.ndarray
     departure: np.ndarray
+    lattice_power_W_per_nm: np.ndarray
     errors: dict[str, np.ndarray] = field(default_factory=dict)
+    drift: str | None = None  # which frozen field drifted most at the end, and where, in words
+    drift_sigma: float | None = None  # by how many standard errors
+
+    @property
+    def relaxes(self):
+        """Whether energies change inside the channel: relaxation or a probe that takes carriers."""
+        coupled = any(probe.coupling > 0.0 for probe in self.scenario.probes)
+        return coupled or bool(self.scenario.relaxation.mechanisms)
 
     def with_limits(self, rows):
         """The same result with other rows of closed forms."""

@@ -39,6 +39,7 @@ CELL_ARRAYS = (
     "carrier_temperature_minus_K",
     "carrier_temperature_K",
     "departure",
+    "lattice_power_W_per_nm",
 )
 AXES = ("x_nm", "cell_edges_nm", "energy_meV", "energy_edges_meV")
 ESTIMATES = (
@@ -48,7 +49,17 @@ ESTIMATES = (
     "resistance_ohm",
     "differential_resistance_ohm",
 )
-COUNTERS = ("histories", "events", "seconds", "iterations", "converged", "residual", "stopped_by")
+COUNTERS = (
+    "histories",
+    "events",
+    "seconds",
+    "iterations",
+    "converged",
+    "residual",
+    "drift",
+    "drift_sigma",
+    "stopped_by",
+)
 
 
 class PlaceError(OSError):

@@ -177,6 +177,7 @@ def fake_result(text=MIXED, changes=None, *, seed=0, noise=0.003, energies=240, 
         "carrier_temperature_minus_K": temperature,
         "carrier_temperature_K": temperature,
         "departure": np.zeros(centres.size),
+        "lattice_power_W_per_nm": np.zeros(centres.size),
         "errors": {
             "f_plus": f_noise,
             "f_minus": f_noise,

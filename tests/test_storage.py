@@ -155,7 +155,7 @@ def test_summary(results, kind, tmp_path):
 def test_null_exactly_where_there_is_no_meaning(results):
     nulls = {
         kind: {key for key, value in storage.summary(results(kind)).items() if value is None}
-        - {"noise", "residual", "long_channel"}
+        - {"noise", "residual", "drift", "drift_sigma", "long_channel"}
         for kind in KINDS
     }
     linear = {"current_A", "heat_W"}
@@ -166,7 +166,7 @@ def test_null_exactly_where_there_is_no_meaning(results):
 
 PROFILES = """
 mu_plus_meV mu_minus_meV mu_meV carrier_temperature_plus_K carrier_temperature_minus_K
-carrier_temperature_K departure
+carrier_temperature_K departure lattice_power_W_per_nm
 """.split()
 
 
