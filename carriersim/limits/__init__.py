@@ -6,7 +6,9 @@ channel, F_L and F_R the Fermi functions of the contacts.
 
 Functions of a scenario hold for elastic scattering in one dimension, at any bias and any
 temperatures, with the random scatterers drawn. They also take the Conductor that `read` makes of a
-scenario, which keeps the integrals done so far. Nothing here shares integration with the engine.
+scenario, which keeps the integrals done so far. For relaxation `number_transport` makes the
+Conductor, and carrier_temperatures_K, lattice_power_W_per_nm and heat_W take the scenario. Nothing
+here shares integration with the engine.
 
 Sources
 -------
@@ -15,10 +17,19 @@ Condensed Matter Physics (1986); Datta, Electronic Transport in Mesoscopic Syste
 Sivan & Imry, Phys. Rev. B 33 (1986) 551; Buttiker, Phys. Rev. Lett. 57 (1986) 1761; Engquist &
 Anderson, Phys. Rev. B 24 (1981) 1151; Nagaev, Phys. Lett. A 169 (1992) 103 and Phys. Rev. B 52
 (1995) 4740; Pothier et al., Phys. Rev. Lett. 79 (1997) 3490; Wiedemann & Franz, Ann. Phys. 165
-(1853) 497, with Sommerfeld's factor, Z. Phys. 47 (1928) 1.
+(1853) 497, with Sommerfeld's factor, Z. Phys. 47 (1928) 1. Relaxation: Kozub & Rudin, Phys. Rev. B
+52 (1995) 7853; Buttiker, Phys. Rev. B 33 (1986) 3020 and IBM J. Res. Dev. 32 (1988) 63 (probes);
+Yao, Kane & Dekker, Phys. Rev. Lett. 84 (2000) 2941.
 """
 
 from carriersim.limits.conductor import Conductor, read, transmission
+from carriersim.limits.dispatch import limits_for
+from carriersim.limits.energy_transport import (
+    HeatBalance,
+    carrier_temperatures_K,
+    heat_W,
+    lattice_power_W_per_nm,
+)
 from carriersim.limits.formulas import (
     LORENZ_NUMBER,
     ballistic_conductance_S,
@@ -40,8 +51,21 @@ from carriersim.limits.landauer import (
     mean_transmission,
     resistance_ohm,
 )
-from carriersim.limits.listing import Limit, compare, limits_for
+from carriersim.limits.number_transport import number_transport
 from carriersim.limits.potentials import profile, response
+from carriersim.limits.relaxation import (
+    coupled_probe_reading,
+    heat_of_one_scatterer_W,
+    hot_carrier_temperature_K,
+    lattice_power_beside_scatterer_W_per_nm,
+    occupation_beside_scatterer,
+    probe_couplings,
+    probe_heat_W,
+    probe_transmission,
+    randomised_backscatter_path_nm,
+    saturation_current_A,
+)
+from carriersim.limits.rows import Limit, compare
 from carriersim.limits.thermal import (
     nearly_equal_temperatures,
     seebeck_V_per_K,
@@ -52,24 +76,39 @@ from carriersim.limits.thermal import (
 __all__ = [
     "LORENZ_NUMBER",
     "Conductor",
+    "HeatBalance",
     "Limit",
     "ballistic_conductance_S",
     "ballistic_resistance_ohm",
+    "carrier_temperatures_K",
     "compare",
     "conductance_S",
     "contact_heat_W",
+    "coupled_probe_reading",
     "current_A",
     "four_point_resistance_ohm",
+    "heat_W",
+    "heat_of_one_scatterer_W",
+    "hot_carrier_temperature_K",
+    "lattice_power_W_per_nm",
+    "lattice_power_beside_scatterer_W_per_nm",
     "limits_for",
     "mean_modes",
     "mean_transmission",
     "nearly_equal_temperatures",
+    "number_transport",
+    "occupation_beside_scatterer",
     "point_resistance",
+    "probe_couplings",
+    "probe_heat_W",
     "probe_reading",
+    "probe_transmission",
     "profile",
+    "randomised_backscatter_path_nm",
     "read",
     "resistance_ohm",
     "response",
+    "saturation_current_A",
     "seebeck_V_per_K",
     "series_transmission",
     "stretch_resistance",

@@ -56,6 +56,8 @@ class Conductor:
     point_law: np.ndarray
     point_amount: np.ndarray
     stretches: tuple[Stretch, ...]
+    with_relaxation: bool = False  # whether number_transport made it
+    coupled: dict = field(default_factory=dict)  # point -> number of the coupled probe it is
     drives: dict = field(default_factory=dict)  # found so far, see energies.py
 
     @property
@@ -146,7 +148,7 @@ class Conductor:
 
 
 def read(scenario):
-    """The Conductor of a scenario; a Conductor is given back as it is."""
+    """The Conductor of a scenario's elastic scattering; a Conductor is given back as it is."""
     if isinstance(scenario, Conductor):
         return scenario
     if scenario.scattering.random:

@@ -3,7 +3,9 @@
 Each function ends in the Result: what comes before is bound with `functools.partial`.
 """
 
-from math import isclose
+from math import isclose, isfinite
+
+import numpy as np
 
 from carriersim.limits.formulas import wiedemann_franz_ratio
 from carriersim.result import Estimate
@@ -67,6 +69,22 @@ def sum_of_kind(kind, result):
 def probe(index, result):
     """The reading of a probe."""
     return result.probes[index].potential if index < len(result.probes) else None
+
+
+def probe_heat(index, result):
+    """The heat that a probe takes."""
+    taken = result.heat_W.probes if result.heat_W is not None else ()
+    return taken[index] if index < len(taken) else None
+
+
+def in_cell(name, place_nm, result):
+    """The value of a profile in the cell whose centre is at a place; None where no centre is."""
+    cell = int(np.argmin(np.abs(result.x_nm - place_nm)))
+    value = float(getattr(result, name)[cell])
+    if not _same_place(float(result.x_nm[cell]), place_nm) or not isfinite(value):
+        return None
+    error = float(result.errors[name][cell]) if name in result.errors else np.nan
+    return Estimate(value, error if isfinite(error) else None)
 
 
 def four_point(index, result):
