@@ -30,7 +30,7 @@ class Part:
 
     A piece lies between from_nm and to_nm and belongs to one mechanism: the name of a path,
     'ballistic' where nothing scatters, or for relaxation that turns carriers round 'bath',
-    'carriers' or 'optical phonon 160 meV'. Every other kind sits at position_nm.
+    'carriers' or 'optical phonon'. Every other kind sits at position_nm.
     """
 
     name: str
@@ -124,9 +124,9 @@ class Result:
 
     transmission: Estimate | None
     current_A: Estimate | None
-    conductance_S: Estimate
+    conductance_S: Estimate | None
     resistance_ohm: Estimate | None
-    differential_resistance_ohm: Estimate
+    differential_resistance_ohm: Estimate | None
     ballistic_resistance_ohm: float
     breakdown: tuple[Part, ...] | None
     four_point: tuple[FourPoint, ...] | None

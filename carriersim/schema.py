@@ -226,8 +226,8 @@ class Relaxation(Part):
         "Mechanisms, any number together", "a list of mappings {kind, path_nm, ...}", ()
     )
     substrate_conductance_W_per_K_m: Positive | None = key(
-        "Thermal conductance to the substrate in W/(K m); prints the rise of the lattice "
-        "temperature that the power would cause",
+        "Thermal conductance to the substrate in W/(K m), per length of the channel; prints the "
+        "rise of the lattice temperature that the power would cause, which itself stays fixed",
         "a number > 0",
         None,
     )
@@ -274,7 +274,7 @@ class Simulation(Part):
     )
     relative_error: Positive | None = key(
         "Stop at this relative standard error of the resistance; 0.005 if neither this nor "
-        "histories nor max_seconds is given",
+        "heat_share_error nor histories nor max_seconds is given",
         "a number > 0",
         None,
     )
@@ -282,7 +282,10 @@ class Simulation(Part):
         "Stop at this standard error of the Fano factor", "a number > 0", None
     )
     heat_share_error: Positive | None = key(
-        "Stop at this standard error of the lattice's share of the heat", "a number > 0", None
+        "Stop at this standard error of the lattice's share of I V, as a fraction of 1 (with "
+        "relative_error: when both are reached); needs relaxation and a bias",
+        "a number > 0",
+        None,
     )
     histories: Whole | None = key(
         "Stop after this number of carriers", "an integer >= simulation.batches", None, ge=1
@@ -296,7 +299,7 @@ class Simulation(Part):
         le=100_000,
     )
     energy_bins: Whole | None = key(
-        "Number of energy bins; automatic unless given",
+        "Number of energy bins, nearly; automatic unless given",
         "an integer in 1..5000",
         None,
         ge=1,
@@ -314,6 +317,7 @@ class Simulation(Part):
     @property
     def target_relative_error(self) -> float | None:
         """Relative error of the resistance to stop at, or None if only other limits are given."""
-        if self.relative_error is None and self.histories is None and self.max_seconds is None:
+        others = (self.histories, self.max_seconds, self.heat_share_error)
+        if self.relative_error is None and all(limit is None for limit in others):
             return 0.005
         return self.relative_error

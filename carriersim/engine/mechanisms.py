@@ -14,11 +14,12 @@ _INDEX = {
     ("carriers", "kept"): KEPT_CARRIERS,
     ("carriers", "randomised"): RANDOM_CARRIERS,
 }
+SAFETY = 0.01  # of 1/path, added to a phonon's bound for rounding and interpolation
 FINE = 16  # entries of the frozen reference per bin
-OVERSHOOT = 0.25  # occupations estimated outside 0..1 by more than this are cut when used as rates
 
 REACH_KT = 14.0  # the axis ends so far beyond the contacts: exp(-14) = 8e-7
-FINEST_KT = 2.0  # bins per kT
+HOTTEST_CARRIERS = np.sqrt(0.75) / np.pi  # k T_e of a long wire over eV (Nagaev 1995)
+FINEST_KT = 3.0  # bins per kT
 MOST_BINS = 400
 FEWEST_BINS = 100
 
@@ -30,9 +31,10 @@ class Mechanisms(NamedTuple):
     phonon_meV: np.ndarray  # (P,)
     phonon_rate: np.ndarray  # (P,) per nm
     phonon_number: np.ndarray  # (P,) of the lattice, Bose-Einstein
-    phonon_bound: np.ndarray  # (P,) per nm, no phonon event is more frequent
+    # (P+1, B+2) per nm: no event of a phonon is more frequent, for energies below the axis, in
+    # each of its bins, and above it; the last row is their sum.
+    phonon_bound: np.ndarray
     bath_meV: float  # k T_b
-    total: float  # per nm, sum of rates and bounds
 
 
 class Axis(NamedTuple):
@@ -65,17 +67,46 @@ def mechanisms_of(scenario):
             direction = mechanism.direction or "kept"
             rates[_INDEX[mechanism.kind, direction]] += 1.0 / mechanism.path_nm
     energy, rate, number = np.array(phonons).reshape(-1, 3).T.copy()
-    # Down (N + 1 - f) and up (N + f), f of the final state between -OVERSHOOT and 1 + OVERSHOOT.
-    bound = rate * (2.0 * number + 2.0 + 2.0 * OVERSHOOT)
     return Mechanisms(
         rates=rates,
         phonon_meV=energy,
         phonon_rate=rate,
         phonon_number=number,
-        phonon_bound=bound,
+        phonon_bound=np.zeros((1, 1)),
         bath_meV=kT,
-        total=float(rates.sum() + bound.sum()),
     )
+
+
+def with_bounds(mechanisms, axis, kelvin, deviation=None):
+    """The same Mechanisms with phonon_bound, for occupations F_r + deviation (2, B, C, n).
+
+    Rates sum to (2 N + 1 + f_upper - f_lower)/path, f the mean of both directions: at least the
+    largest upper and the smallest lower occupation of the bins that a bin's energies reach.
+    """
+    edges = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
+    step = fermi.occupation(edges, 0.0, kelvin)
+    if kelvin == 0.0:
+        step = np.where(edges <= 0.0, 1.0, 0.0)
+    deviation = np.zeros((2, axis.bins, 1)) if deviation is None else deviation
+    mean = np.pad(deviation.mean(axis=0).reshape(axis.bins, -1), ((1, 1), (0, 0)))
+    # Inside a bin the deviation is linear and stays in its neighbours' range.
+    around = np.stack([mean[:-2], mean[1:-1], mean[2:]])
+    least = np.pad(step[1:, None] + around.min(axis=0), ((1, 1), (0, 0)))
+    most = np.pad(step[:-1, None] + around.max(axis=0), ((1, 1), (0, 0)))
+    least[0], most[0] = 1.0, 1.0  # full below the axis
+    bound = np.empty((mechanisms.phonon_meV.size + 1, axis.bins + 2))
+    bins = np.arange(1, axis.bins + 1)
+    for k, energy in enumerate(mechanisms.phonon_meV):
+        shift = energy / axis.step_meV
+        by = np.unique([np.floor(shift + 1e-9), np.ceil(shift - 1e-9)]).astype(int)
+        up = most[np.minimum(bins[:, None] + by, axis.bins + 1)].max(axis=1)
+        down = least[np.maximum(bins[:, None] - by, 0)].min(axis=1)
+        swing = np.clip((up - down).max(axis=-1) + SAFETY, -1.0, 1.0)
+        number, rate = mechanisms.phonon_number[k], mechanisms.phonon_rate[k]
+        bound[k, 1:-1] = rate * (2.0 * number + 1.0 + swing)
+        bound[k, [0, -1]] = rate * (2.0 * number + 2.0)
+    bound[-1] = bound[:-1].sum(axis=0)
+    return mechanisms._replace(phonon_bound=bound)
 
 
 def probes_of(scenario, nodes_nm):
@@ -86,7 +117,8 @@ def probes_of(scenario, nodes_nm):
         node = np.searchsorted(nodes_nm, probe.position_nm)
         from_left[node] = min(1.0, 2.0 * probe.weight_right * probe.coupling)
         from_right[node] = min(1.0, 2.0 * (1.0 - probe.weight_right) * probe.coupling)
-        emits_right[node] = probe.weight_right
+        if probe.coupling > 0.0:  # as it absorbs, or equilibrium would not last
+            emits_right[node] = from_left[node] / (from_left[node] + from_right[node])
     return Probes(from_left, from_right, emits_right)
 
 
@@ -95,7 +127,10 @@ def axis_of(scenario, window, phonons_meV):
     mu = window.mu_left_meV
     kelvin = [window.temperature_left_K, window.temperature_right_K, scenario.bath_temperature_K]
     hottest = BOLTZMANN_MEV_PER_K * max(kelvin)
-    low, high = min(mu, 0.0) - REACH_KT * hottest, max(mu, 0.0) + REACH_KT * hottest
+    reach = hottest
+    if any(m.kind == "carriers" for m in scenario.relaxation.mechanisms):
+        reach = np.hypot(hottest, HOTTEST_CARRIERS * abs(mu))
+    low, high = min(mu, 0.0) - REACH_KT * reach, max(mu, 0.0) + REACH_KT * reach
     if phonons_meV.size:
         low, high = low - phonons_meV.max(), high + phonons_meV.max()
     elif mu:
@@ -108,11 +143,24 @@ def axis_of(scenario, window, phonons_meV):
     )
     step = (high - low) / wanted
     if phonons_meV.size:
-        step = phonons_meV[0] / max(1, round(phonons_meV[0] / step))
+        step = _dividing(phonons_meV[0], mu, step)
     elif mu and abs(mu) > 4 * step:
         step = abs(mu) / round(abs(mu) / step)  # an edge at each contact's potential
     first = np.floor(low / step) * step
     return Axis(float(first), float(step), int(np.ceil((high - first) / step)))
+
+
+def _dividing(phonon_meV, mu_meV, step):
+    """A step that divides a phonon's energy and, as nearly as it can, the bias as well.
+
+    At low temperatures occupations are steps at both contacts' potentials and whole phonons from
+    there: they should lie between bins.
+    """
+    fewest = max(1, round(phonon_meV / step))
+    numbers = np.arange(fewest, int(1.3 * fewest) + 3)
+    places = abs(mu_meV) / phonon_meV * numbers
+    misfit = np.abs(places - np.rint(places))
+    return phonon_meV / numbers[np.argmin(np.maximum(misfit, 0.01))]
 
 
 def reference(axis, kelvin, parts=1):

@@ -22,17 +22,18 @@ class Observer:
         self.problem = problem
         self.window = problem.window
         self.degeneracy = problem.scenario.channel.degeneracy
+        self.jumps = problem.is_scatterer
         self.full = 1.0 if self.window.linear else self.window.mu_left_meV
         f = problem.functionals
         at_bias = self.window.same_temperature and not self.window.linear
         self.drive = f.current if at_bias else f.bias_slope
-        self.ballistic_ohm = 1e-3 / (AMPERE_PER_MEV * self.degeneracy * f.mean_modes)
+        self.ballistic_ohm = ballistic_ohm(problem)
         # The output grid; with several bins it is the run's own, each cut into `finer` parts.
         self.finer = 1
         self.grid = problem.bins or Bins(axis(self.window, []), self.window.breaks())
         if self.grid.count < FEWEST_ENERGIES:
             self.finer = -(-FEWEST_ENERGIES // self.grid.count)
-            self.grid = Bins(_cut(self.grid.edges, self.finer), self.window.breaks())
+            self.grid = Bins(cut_in_parts(self.grid.edges, self.finer), self.window.breaks())
         self.root_meV, self.root_functionals = None, None
 
     def scalars(self, totals):
@@ -56,6 +57,8 @@ class Observer:
                 "differential": 1.0 / conductance,
                 "left_power": power - heat,
                 "right_power": heat,
+                "lattice_power": 0.0,
+                "probe_power": np.zeros(self.problem.probe_node.size),
             }
             result |= self._thermal(t)
             result |= self._parts(totals, t, resistance)
@@ -145,17 +148,12 @@ class Observer:
         reading = weight * from_left[probes] + (1.0 - weight) * from_right[probes]
         before = from_left - 0.5 * through  # mean of both directions just left of each node
         after = from_right + 0.5 * through
-        cuts = self.cuts()
-        jumps = before - after
-        pieces = after[cuts[:-1]] - before[cuts[1:]]
-        shares = self._mechanism_shares(t)
-        return {
+        parts = parts_of(
+            before, after, self.cuts(), self.jumps, self._mechanism_shares(t), resistance
+        )
+        return parts | {
             "probe": reading,
-            "four_point": _pair_differences(reading) * resistance,
-            "interface": np.array([1.0 - before[0], after[-1]]) * resistance,
-            "jumps": jumps[self.problem.is_scatterer] * resistance,
-            "pieces": np.concatenate([p * s for p, s in zip(pieces, shares, strict=True)])
-            * resistance,
+            "four_point": pair_differences(reading) * resistance,
         }
 
     def piece_scatters(self):
@@ -165,9 +163,11 @@ class Observer:
 
     def cuts(self):
         """Nodes where the breakdown is cut: contacts, point scatterers, section edges."""
-        cut = self.problem.is_scatterer | self.problem.is_section_edge
-        cut[[0, -1]] = True
-        return np.flatnonzero(cut)
+        return cuts_of(self.problem, self.jumps)
+
+    def turning(self, node):
+        """Names of what turns carriers round in the piece that begins at a node."""
+        return [path.name for path in self.problem.segment_paths[node]]
 
     def _mechanism_shares(self, t):
         """For each piece the share of the backscattered flux that each of its paths destroys."""
@@ -214,28 +214,57 @@ class Observer:
         return fermi.occupation(e, 0.0, w.temperature_right_K), w.difference(e)
 
 
-def _cut(edges, parts):
-    """Each interval cut into equal parts."""
-    inner = np.linspace(edges[:-1], edges[1:], parts, endpoint=False)
-    return np.append(inner.T.ravel(), edges[-1])
+def ballistic_ohm(problem):
+    """Resistance of the channel if nothing scattered."""
+    quantum = AMPERE_PER_MEV * problem.scenario.channel.degeneracy
+    return 1e-3 / (quantum * problem.functionals.mean_modes)
 
 
-def _pair_differences(reading):
+def cuts_of(problem, jumps):
+    """Nodes where the breakdown is cut: contacts, section edges and where potentials jump."""
+    cut = jumps | problem.is_section_edge
+    cut[[0, -1]] = True
+    return np.flatnonzero(cut)
+
+
+def parts_of(before, after, cuts, jumps, shares, resistance):
+    """Interfaces, jumps and pieces of a resistance.
+
+    before, after: mean potential of both directions left and right of each node, as fraction of
+    the bias; jumps: (K,) bool; shares: of each mechanism, for each piece between two cuts.
+    """
+    pieces = after[cuts[:-1]] - before[cuts[1:]]
+    return {
+        "interface": np.array([1.0 - before[0], after[-1]]) * resistance,
+        "jumps": (before - after)[jumps] * resistance,
+        "pieces": np.concatenate([p * s for p, s in zip(pieces, shares, strict=True)]) * resistance,
+    }
+
+
+def pair_differences(reading):
     """Reading of the left probe less that of the right one, for every pair."""
     first, second = np.triu_indices(reading.size, 1)
     return reading[first] - reading[second]
 
 
-def departure_of(f, centres, widths, mu_meV, kelvin):
+def cut_in_parts(edges, parts):
+    """Each interval cut into equal parts."""
+    inner = np.linspace(edges[:-1], edges[1:], parts, endpoint=False)
+    return np.append(inner.T.ravel(), edges[-1])
+
+
+def departure_of(f, centres, widths, mu_meV, kelvin, local=None):
     """Squared distance from local equilibrium and its derivative; shapes (E, C), results (C,).
 
     int (f - F(E; mu, T_e))^2 dE / (k T_e), with F of the same number and energy as f. Also returns
-    the derivative with respect to f in each bin, (E, C), F moving along.
+    the derivative with respect to f in each bin, (E, C), F moving along. local: F where it is more
+    than its value at the centres, for instance its mean over wide bins.
     """
     kT = BOLTZMANN_MEV_PER_K * kelvin
     cold = kT <= 0.0
     kT = np.where(cold, 1.0, kT)
-    local = fermi.occupation(centres[:, None], mu_meV, np.where(cold, 0.0, kelvin))
+    if local is None:
+        local = fermi.occupation(centres[:, None], mu_meV, np.where(cold, 0.0, kelvin))
     gap = np.where(cold, 0.0, f - local)
     x = (centres[:, None] - mu_meV) / kT
     slope = local * (1.0 - local) / kT  # dF/dmu; dF/d(kT) = x dF/dmu
@@ -246,3 +275,11 @@ def departure_of(f, centres, widths, mu_meV, kelvin):
     to_kT = 3.0 / (np.pi**2 * kT) * (centres[:, None] - mu_meV)
     derivative = (2.0 * gap / kT + by_mu + by_kT * to_kT) * widths[:, None]
     return square, np.where(cold, 0.0, derivative)
+
+
+def root_of(square, error):
+    """Square root of an estimate that noise may have made negative, and its error."""
+    root = np.sqrt(np.maximum(square, 0.0))
+    # d sqrt(s) = ds / (2 sqrt(s)); near zero the root of the error bounds it instead.
+    bound = 2.0 * np.maximum(root, np.sqrt(error))
+    return root, np.divide(error, bound, out=np.zeros_like(error), where=bound > 0.0)

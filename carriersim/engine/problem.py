@@ -68,6 +68,7 @@ class Relaxed:
     tables: Tables | None
     reference: np.ndarray  # (B,) F_r averaged over each bin
     probe_kelvin: np.ndarray  # (K,)
+    equilibrium: bool  # without a bias nothing flows: all temperatures are equal
 
 
 @dataclass(frozen=True)
@@ -190,7 +191,6 @@ def _relaxed(scenario, window, nodes, transmissions, paths, tables):
         step_meV=axis_.step_meV,
         exact_energy=not tables and mechanisms.phonon_meV.size == 0,
         carriers=bool(mechanisms.rates[KEPT_CARRIERS] or mechanisms.rates[RANDOM_CARRIERS]),
-        newton=0.0,
         tangent=False,
     )
     return Relaxed(
@@ -201,7 +201,13 @@ def _relaxed(scenario, window, nodes, transmissions, paths, tables):
         tables=_exact_tables(transmissions, paths, tables) if tables else None,
         reference=reference(axis_, bath),
         probe_kelvin=probe_kelvin,
+        equilibrium=len({bath, scenario.left_temperature_K, *_kelvin(scenario)}) == 1,
     )
+
+
+def _kelvin(scenario):
+    coupled = (p.temperature_K for p in scenario.probes if p.coupling > 0.0)
+    return [scenario.right_temperature_K, *(t for t in coupled if t is not None)]
 
 
 def _table_index(tables):

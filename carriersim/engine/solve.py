@@ -48,6 +48,7 @@ class Goal:
     relative_error: float | None
     histories: int | None
     max_seconds: float | None
+    heat_share_error: float | None = None  # absolute, of the lattice's share of I V
 
 
 @dataclass
@@ -69,6 +70,11 @@ class Totals:
     field_sum: np.ndarray | None = None
     field_square: np.ndarray | None = None
     samples: int = 0
+
+    @property
+    def all_histories(self):
+        """Histories of the whole run."""
+        return int(self.histories.sum())
 
 
 def solve(problem, goal, workers=1, stop=None, progress=None):
@@ -201,7 +207,7 @@ def _one_round(problem, totals, sizes, run, pool, workers):
         results = (run(*task) for task in tasks)
     else:
         results = chain.from_iterable(
-            pool(delayed(_several)(run, tasks[chunk]) for chunk in _chunks(len(tasks), workers))
+            pool(delayed(several)(run, tasks[chunk]) for chunk in chunks(len(tasks), workers))
         )
     samples = []
     sums = None
@@ -233,13 +239,13 @@ def _one_round(problem, totals, sizes, run, pool, workers):
     return True
 
 
-def _chunks(tasks, workers):
+def chunks(tasks, workers):
     """Slices of tasks, a few for each worker: handing over each batch alone costs too much."""
     size = max(1, -(-tasks // (CHUNKS * workers)))
     return [slice(start, start + size) for start in range(0, tasks, size)]
 
 
-def _several(run, tasks):
+def several(run, tasks):
     return [run(*task) for task in tasks]
 
 

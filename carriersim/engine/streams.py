@@ -137,3 +137,11 @@ def fill_exponentials(lanes, out):
     """BLOCK exponential numbers of mean 1 into out; lanes (4 * BLOCK,) advances."""
     for k in range(BLOCK):
         out[k] = minus_log(2.0 - _one_to_two(_next_bits(lanes, k)))
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def fill_logistics(lanes, out):
+    """BLOCK logistic numbers into out: ln(v / (1 - v)); lanes (4 * BLOCK,) advances."""
+    for k in range(BLOCK):
+        v = _one_to_two(_next_bits(lanes, k)) - (1.0 - 2.0**-53)  # never 0 or 1
+        out[k] = minus_log((1.0 - v) / v)

@@ -13,12 +13,28 @@ from numba import njit
 
 from carriersim.engine.events import GOLDEN, passes_at, varying_rate
 from carriersim.engine.flights import DONE, STOPPED, TOO_MANY_EVENTS
-from carriersim.engine.mechanisms import FINE, KEPT_BATH, OVERSHOOT, RANDOM_BATH, RANDOM_CARRIERS
-from carriersim.engine.streams import BLOCK, fill_exponentials, fill_uniforms, minus_log
+from carriersim.engine.mechanisms import FINE, KEPT_BATH, RANDOM_BATH, RANDOM_CARRIERS
+from carriersim.engine.residual import Strengths, at_node, deviation, inside
+from carriersim.engine.streams import (
+    BLOCK,
+    fill_exponentials,
+    fill_logistics,
+    fill_uniforms,
+    minus_log,
+)
 
 # What a source emits; the order of Sources.share.
-LEFT_NUMBER, LEFT_HEAT, RIGHT_HEAT, PROBE_HEAT, CARRIER_HEAT, PHONON_PAIR = range(6)
-SOURCES = 6
+(
+    LEFT_NUMBER,
+    LEFT_HEAT,
+    RIGHT_HEAT,
+    PROBE_HEAT,
+    CARRIER_HEAT,
+    PHONON_PAIR,
+    TRIAL_INSIDE,
+    TRIAL_NODE,
+) = range(8)
+SOURCES = 8
 # Columns of Tally.cells for each direction: number, energy, and energy that carriers events keep,
 # each as (signed number of flight ends, sum of their places).
 NUMBER, ENERGY, KEPT_ENERGY = 0, 2, 4
@@ -26,17 +42,29 @@ NUMBER, ENERGY, KEPT_ENERGY = 0, 2, 4
 OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS = range(4)
 # What happens to a particle; BORN: it starts its first flight.
 NOTHING, CHANGED, GONE, BORN = range(4)
+ONE, TWO, THREE, FOUR, FIVE = (np.uint64(n) for n in range(1, 6))
+
+
+class Base(NamedTuple):
+    """Potentials and temperatures of the known occupation: the reference, or a trial; in meV."""
+
+    mu: np.ndarray  # (3, C) right-moving, left-moving, mean; in the middle of cells
+    mu_step: np.ndarray  # (3, C) its change across each cell
+    kT: np.ndarray  # (3, C)
+    probe_mu: np.ndarray  # (K,)
+    probe_kT: np.ndarray  # (K,)
 
 
 class Frozen(NamedTuple):
     """Fields of earlier rounds; C cells, B bins, K nodes."""
 
-    mu: np.ndarray  # (3, C) right-moving, left-moving, mean, in meV
-    temperature: np.ndarray  # (3, C) k T_e in meV
-    probe_mu: np.ndarray  # (K,) meV
-    probe_kT: np.ndarray  # (K,) meV
-    occupation: np.ndarray  # (2, B, C) right, left
-    reference: np.ndarray
+    mu: np.ndarray  # (3, C) right-moving, left-moving, mean, in meV; in the middle of cells
+    mu_step: np.ndarray  # (3, C) its change across each cell
+    kT: np.ndarray  # (3, C) of the carriers
+    probe_mu: np.ndarray  # (K,)
+    probe_kT: np.ndarray  # (K,) of what probes emit
+    base: Base  # the same of what particles are the deviation from
+    reference: np.ndarray  # (B FINE,) for phonons without a trial
 
 
 class Sources(NamedTuple):
@@ -50,6 +78,7 @@ class Sources(NamedTuple):
     pair_bin: np.ndarray  # (n,) int32: bin of the lower state
     pair_kind: np.ndarray  # (n,) int8: bits 0 upper leftward, 1 lower leftward, 2 negative, 3 late
     pair_phonon: np.ndarray  # (n,) int8
+    strengths: Strengths | None  # of a trial's residual
 
 
 class Setting(NamedTuple):
@@ -64,7 +93,6 @@ class Setting(NamedTuple):
     step_meV: float
     exact_energy: bool  # no event depends on energy: kept energies are exact
     carriers: bool  # carriers events happen, so kept energies differ from energies
-    newton: float  # weight of Newton's form of the phonon terms, 0 to 1
     tangent: bool  # follow a small change of the bias instead of the deviation itself
 
 
@@ -93,11 +121,11 @@ def _uniform(uniforms, lanes, position):
 
 
 @njit(cache=True, error_model="numpy", forceinline=True)
-def _box(mu, kT, u, v):
-    """Energy of the deviation F(mu) - F(0): uniform between the potentials, smeared by kT."""
-    energy = mu * u
+def _box(base, mu, kT, u, v):
+    """Energy of the deviation F(mu) - F(base): uniform between the potentials, smeared by kT."""
+    energy = base + (mu - base) * u
     if kT > 0.0:
-        energy += kT * (minus_log(1.0 - v) - minus_log(v))
+        energy += kT * minus_log((1.0 - v) / v)
     return energy
 
 
@@ -143,24 +171,30 @@ def _segment_of(geometry, cell):
 
 @njit(cache=True, error_model="numpy")
 def _emit(
-    kind, rest, geometry, mechanisms, probes, frozen, sources, setting, uniforms, lanes, position,
-    tally, start,
+    kind, rest, geometry, tables, mechanisms, probes, frozen, trial, sources, setting, uniforms,
+    lanes, position, tally, start,
 ):  # fmt: skip
     """Draw from a source; returns the number of particles put into start (1 or 2).
 
     rest: uniform number left over from choosing the source.
     """
     last = geometry.transmission.size - 1
+    if trial is not None:
+        if kind == TRIAL_INSIDE or kind == TRIAL_NODE:
+            return _emit_residual(kind, rest, geometry, tables, mechanisms, probes, trial, sources,
+                                  uniforms, lanes, position, start)  # fmt: skip
     if kind == PHONON_PAIR:
         return _emit_pair(rest, geometry, mechanisms, sources, setting, uniforms, lanes, position,
                           tally, start)  # fmt: skip
     if kind == LEFT_HEAT or kind == RIGHT_HEAT:
         left = kind == LEFT_HEAT
         mu, kT = (setting.mu_left, setting.left_kT) if left else (0.0, setting.right_kT)
+        base_kT = setting.bath_kT
         segment, place, right, at_node, heat = (0 if left else last), 0.0, left, True, 1.0
     elif kind == PROBE_HEAT:
         segment = min(np.searchsorted(sources.probe, rest, side="right"), last)
         mu, kT = frozen.probe_mu[segment], frozen.probe_kT[segment]
+        base_kT = frozen.base.probe_kT[segment]
         place, at_node, heat = 0.0, True, 2.0
         right = _uniform(uniforms, lanes, position) < probes.emits_right[segment]
     else:
@@ -169,13 +203,17 @@ def _emit(
         )
         cells = frozen.mu.shape[1]
         which, cell = entry // cells, entry % cells
-        mu, kT = frozen.mu[which, cell], frozen.temperature[which, cell]
+        mu, kT, base_kT = (
+            frozen.mu[which, cell],
+            frozen.kT[which, cell],
+            frozen.base.kT[which, cell],
+        )
         segment = _segment_of(geometry, cell)
         place = cell - geometry.first_cell[segment] + _uniform(uniforms, lanes, position)
         right = which == 0 or (which == 2 and _uniform(uniforms, lanes, position) < 0.5)
         at_node, heat = False, 1.0
-    away = _heat_energy(kT, setting.bath_kT, uniforms, lanes, position)
-    sign = 1.0 if kT > setting.bath_kT else -1.0
+    away = _heat_energy(kT, base_kT, uniforms, lanes, position)
+    sign = 1.0 if kT > base_kT else -1.0
     for member in range(2):
         energy = mu + away if member == 0 else mu - away
         charge = sign if member == 0 else -sign
@@ -215,10 +253,41 @@ def _emit_pair(
     return 2
 
 
+@njit(cache=True, error_model="numpy")
+def _emit_residual(
+    kind, rest, geometry, tables, mechanisms, probes, trial, sources, uniforms, lanes, position,
+    start,
+):  # fmt: skip
+    """A particle from the residual of the trial occupation; its weight carries the sign."""
+    bins, cells = trial.value.shape[1:3]
+    within = kind == TRIAL_INSIDE
+    table = sources.strengths.inside if within else sources.strengths.nodes
+    entry = min(np.searchsorted(table, rest, side="right"), table.size - 1)
+    u = _uniform(uniforms, lanes, position)
+    part = _uniform(uniforms, lanes, position)
+    if within:
+        cell, b, side = entry % cells, (entry // cells) % bins, entry // (cells * bins)
+        energy = trial.first_meV + (b + u) * trial.step_meV
+        segment = _segment_of(geometry, cell)
+        r = inside(side, energy, segment, cell, part, geometry, tables, mechanisms, trial)
+        weight = r * trial.step_meV * geometry.length_nm[segment] / geometry.cells[segment]
+        weight /= sources.strengths.inside_each[entry]
+        place = cell - geometry.first_cell[segment] + part
+        _put(start, 0, segment, place, energy, energy, weight, 0.0, side == 0, False)
+        return 1
+    nodes = geometry.transmission.size
+    b, node, side = entry % bins, (entry // bins) % nodes, entry // (bins * nodes)
+    energy = trial.first_meV + (b + u) * trial.step_meV
+    r = at_node(side, energy, node, geometry, tables, probes, trial)
+    weight = r * trial.step_meV / sources.strengths.nodes_each[entry]
+    _put(start, 0, node, 0.0, energy, energy, weight, 2.0, side == 0, True)
+    return 1
+
+
 @njit(cache=True, nogil=True, error_model="numpy")
 def wander(
-    first, histories, offset, geometry, tables, mechanisms, probes, frozen, sources, setting,
-    stream, tally, stop, event_limit,
+    first, histories, offset, geometry, tables, mechanisms, probes, frozen, trial, sources,
+    setting, stream, tally, stop, event_limit,
 ):  # fmt: skip
     """Follow `histories` draws from the sources, each to its end; returns the kernel's outcome.
 
@@ -234,44 +303,59 @@ def wander(
     first_cell, cell_count = geometry.first_cell, geometry.cells
     thickness = geometry.thickness
     cell_nm = geometry.length_nm / geometry.cells
-    mu, occupation, probe_mu = frozen.mu, frozen.occupation, frozen.probe_mu
+    mu, base_mu, base_kT = frozen.mu, frozen.base.mu, frozen.base.kT
+    mu_step, base_step = frozen.mu_step, frozen.base.mu_step
+    probe_mu, base_probe_mu = frozen.probe_mu, frozen.base.probe_mu
+    base_probe_kT = frozen.base.probe_kT
     from_left, from_right, emits_right = probes.from_left, probes.from_right, probes.emits_right
-    rates, total = mechanisms.rates, mechanisms.total
+    rates = mechanisms.rates
     phonon_meV, phonon_number = mechanisms.phonon_meV, mechanisms.phonon_number
     phonon_rate, phonon_bound = mechanisms.phonon_rate, mechanisms.phonon_bound
     share = sources.share
     reference = frozen.reference
-    fine_per_meV = FINE / setting.step_meV
+    first_meV, per_step = setting.first_meV, 1.0 / setting.step_meV
+    fine_per_meV = FINE * per_step
+    elastic_of = thickness / geometry.length_nm
+    any_phonons = phonon_meV.size > 0
+    rate_of = (elastic_of + rates.sum()) * cell_nm  # without what depends on energy
+    free_of = 1.0 / rate_of
+    whole = 0.5 if not setting.tangent else 1.0  # mean energy of a redraw, over its potential
+    left_part = 1.0 / share[LEFT_NUMBER] if share[LEFT_NUMBER] > 0.0 else 0.0
     last = geometry.transmission.size - 1
     top = bins.shape[0]
     start = Particles(np.zeros(2, np.int64), np.zeros((2, 5)), np.zeros((2, 2), np.bool_))
     origin, numbers, flags = start.place, start.numbers, start.flags
-    p, q = position[0], position[1]
+    logistics = np.empty(BLOCK)
+    p, q, r = position[0], position[1], BLOCK
     tau = 0.0
     made = 0
     for history in range(first, first + histories):
         quantile = np.float64(offset + np.uint64(history) * GOLDEN) * 2.0**-64
-        kind = min(np.searchsorted(share, quantile, side="right"), SOURCES - 1)
-        below = share[kind - 1] if kind > 0 else 0.0
-        rest = (quantile - below) / (share[kind] - below)
-        if kind == LEFT_NUMBER:  # most draws: without a call
-            if q == BLOCK:
-                fill_uniforms(lanes, uniforms)
-                q = 0
-            u, kT = (1.0, setting.left_kT) if setting.tangent else (rest, setting.bath_kT)
-            new = _box(setting.mu_left, kT, u, uniforms[q])
-            q += 1
-            scalars[ENERGY_LEFT] += setting.left_sign * new
+        if quantile < share[LEFT_NUMBER]:  # most draws: without a call
+            if r == BLOCK:
+                fill_logistics(lanes, logistics)
+                r = 0
+            u, kT = quantile * left_part, setting.bath_kT
+            if setting.tangent:
+                u, kT = 1.0, setting.left_kT
+            new = setting.mu_left * u + kT * logistics[r]
+            r += 1
+            new_kept = new
+            if setting.exact_energy:  # energies decide nothing: their mean has less noise
+                new_kept = setting.mu_left * whole
+            scalars[ENERGY_LEFT] += setting.left_sign * new_kept
             origin[0] = 0
-            numbers[0, 1] = numbers[0, 2] = new
+            numbers[0, 1], numbers[0, 2] = new, new_kept
             numbers[0, 3], numbers[0, 4] = setting.left_sign, 0.0
             flags[0, 0] = flags[0, 1] = True
             members = 1
         else:
+            kind = min(np.searchsorted(share, quantile, side="right"), SOURCES - 1)
+            rest = (quantile - share[kind - 1]) / (share[kind] - share[kind - 1])
             position[1] = q
             members = _emit(
-                kind, rest, geometry, mechanisms, probes, frozen, sources, setting, uniforms,
-                lanes, position, tally, start,
+                kind, rest, geometry, tables, mechanisms, probes, frozen, trial, sources, setting,
+                uniforms, lanes, position, tally, start,
             )  # fmt: skip
             q = position[1]
         for member in range(members):
@@ -282,7 +366,7 @@ def wander(
             emitted = numbers[member, 4] == 2.0  # by a probe: does not arrive there
             forgets = warm and setting.exact_energy
             budget = event_limit
-            bin_ = np.int64(np.floor((energy - setting.first_meV) / setting.step_meV))
+            bin_ = np.int64(np.floor((energy - first_meV) * per_step))
             if at_node:
                 cell = first_cell[node] if node < last else cells.shape[0] - 1
                 part = 0.0 if node < last else 1.0
@@ -297,39 +381,62 @@ def wander(
             tau = exponentials[p]
             p += 1
             while True:
-                # The flight that ends here, and the one that starts: written out twice, because a
-                # function that takes the tallies costs more than the adding.
-                if outcome != BORN:
-                    step = sign if right else -sign
-                    column = 0 if right else 2
+                # Flights that end or start here. Indices are unsigned: signed ones are tested.
+                c, out = np.uint64(cell), np.uint64(0 if right else 2)
+                step = sign if right else -sign
+                if outcome == CHANGED:
+                    turned_here = onward != right
+                    begin = step if turned_here else -step
+                    into = np.uint64(0 if onward else 2)
+                    later = bin_
+                    if new != energy:
+                        later = np.int64(np.floor((new - first_meV) * per_step))
                     if 0 <= bin_ < top:
-                        bins[bin_, cell, column] += step
-                        bins[bin_, cell, column + 1] += step * part
-                    column *= 3
-                    cells[cell, column] += step
-                    cells[cell, column + 1] += step * part
-                    cells[cell, column + 2] += step * energy
-                    cells[cell, column + 3] += step * energy * part
+                        b = np.uint64(bin_)
+                        bins[b, c, out] += step
+                        bins[b, c, out + ONE] += step * part
+                    if 0 <= later < top:
+                        b = np.uint64(later)
+                        bins[b, c, into] += begin
+                        bins[b, c, into + ONE] += begin * part
+                    bin_ = later
+                    out, into = out * THREE, into * THREE
+                    if turned_here:
+                        cells[c, out] += step
+                        cells[c, out + ONE] += step * part
+                        cells[c, out + TWO] += step * energy
+                        cells[c, out + THREE] += step * energy * part
+                        cells[c, into] += begin
+                        cells[c, into + ONE] += begin * part
+                        cells[c, into + TWO] += begin * new
+                        cells[c, into + THREE] += begin * new * part
+                    else:  # the number goes on
+                        given = step * (energy - new)
+                        cells[c, out + TWO] += given
+                        cells[c, out + THREE] += given * part
                     if setting.carriers:
-                        cells[cell, column + 4] += step * kept
-                        cells[cell, column + 5] += step * kept * part
+                        cells[c, out + FOUR] += step * kept
+                        cells[c, out + FIVE] += step * kept * part
+                        cells[c, into + FOUR] += begin * new_kept
+                        cells[c, into + FIVE] += begin * new_kept * part
+                    energy, kept, right = new, new_kept, onward
+                else:
+                    if outcome == BORN:
+                        step = -step
+                    if 0 <= bin_ < top:
+                        b = np.uint64(bin_)
+                        bins[b, c, out] += step
+                        bins[b, c, out + ONE] += step * part
+                    out *= THREE
+                    cells[c, out] += step
+                    cells[c, out + ONE] += step * part
+                    cells[c, out + TWO] += step * energy
+                    cells[c, out + THREE] += step * energy * part
+                    if setting.carriers:
+                        cells[c, out + FOUR] += step * kept
+                        cells[c, out + FIVE] += step * kept * part
                     if outcome == GONE:
                         break
-                    energy, kept, right = new, new_kept, onward
-                    bin_ = np.int64(np.floor((energy - setting.first_meV) / setting.step_meV))
-                step = -sign if right else sign
-                column = 0 if right else 2
-                if 0 <= bin_ < top:
-                    bins[bin_, cell, column] += step
-                    bins[bin_, cell, column + 1] += step * part
-                column *= 3
-                cells[cell, column] += step
-                cells[cell, column + 1] += step * part
-                cells[cell, column + 2] += step * energy
-                cells[cell, column + 3] += step * energy * part
-                if setting.carriers:
-                    cells[cell, column + 4] += step * kept
-                    cells[cell, column + 5] += step * kept * part
                 outcome = NOTHING
                 while outcome == NOTHING:
                     if q > BLOCK - 8:  # an event uses fewer
@@ -361,9 +468,14 @@ def wander(
                                         q += 1
                                         break
                                     u = 1.0 if setting.tangent else uniforms[q + 1]
-                                    new = _box(probe_mu[node], setting.bath_kT, u, uniforms[q + 2])
+                                    new = _box(
+                                        base_probe_mu[node], probe_mu[node], base_probe_kT[node],
+                                        u, uniforms[q + 2],
+                                    )  # fmt: skip
                                     new_kept = new
-                                    probe_heat[node] -= sign * new
+                                    if setting.exact_energy:
+                                        new_kept = probe_mu[node] * whole
+                                    probe_heat[node] -= sign * new_kept
                                     onward = uniforms[q + 3] < emits_right[node]
                                     outcome = CHANGED
                                     q += 3
@@ -382,10 +494,15 @@ def wander(
                         y = 0.0 if onward else np.float64(cell_count[segment])
                         continue
                     # On through the segment: to its end or to the next event.
-                    elastic = thickness[segment] / (cell_nm[segment] * cell_count[segment])
+                    elastic, rate, free = elastic_of[segment], rate_of[segment], free_of[segment]
                     if tables is not None:
                         elastic += varying_rate(segment, energy, tables)
-                    rate = (elastic + total) * cell_nm[segment]
+                        rate = (elastic + rates.sum()) * cell_nm[segment]
+                        free = 1.0 / rate
+                    if any_phonons:
+                        row = min(max(bin_ + 1, 0), top + 1)
+                        rate += phonon_bound[-1, row] * cell_nm[segment]
+                        free = 1.0 / rate
                     ahead = cell_count[segment] - y if right else y
                     if tau >= rate * ahead:
                         tau -= rate * ahead
@@ -394,7 +511,7 @@ def wander(
                         cell = first_cell[segment] + (cell_count[segment] - 1 if right else 0)
                         at_node = True
                         continue
-                    y += tau / rate if right else -tau / rate
+                    y += tau * free if right else -tau * free
                     if p >= BLOCK:
                         fill_exponentials(lanes, exponentials)
                         p = 0
@@ -403,7 +520,7 @@ def wander(
                     made += 1
                     inner = min(max(np.int64(y), 0), cell_count[segment] - 1)
                     cell, part = first_cell[segment] + inner, y - inner
-                    v = (elastic + total) * uniforms[q] - elastic
+                    v = rate / cell_nm[segment] * uniforms[q] - elastic
                     q += 1
                     new, new_kept, onward = energy, kept, right
                     if v < 0.0:
@@ -423,37 +540,43 @@ def wander(
                         randomised = which == RANDOM_BATH or which == RANDOM_CARRIERS
                         field = 2 if randomised else (0 if right else 1)
                         u = 1.0 if setting.tangent else uniforms[q]
-                        new = _box(mu[field, cell], setting.bath_kT, u, uniforms[q + 1])
-                        if to_bath:
-                            heat[cell] += sign * (kept - new)
-                        if to_bath or not setting.exact_energy:
+                        kT = setting.bath_kT if to_bath else base_kT[field, cell]
+                        # A constant mu would hand energy on through the cell, unseen by any drift.
+                        low = base_mu[field, cell] + (part - 0.5) * base_step[field, cell]
+                        high = mu[field, cell] + (part - 0.5) * mu_step[field, cell]
+                        if r == BLOCK:
+                            fill_logistics(lanes, logistics)
+                            r = 0
+                        new = low + (high - low) * u + kT * logistics[r]
+                        r += 1
+                        if not setting.exact_energy:
                             new_kept = new
+                        elif to_bath:
+                            new_kept = high * whole
+                        if to_bath:
+                            heat[cell] += sign * (kept - new_kept)
                         if randomised:
-                            onward = uniforms[q + 2] < 0.5
-                        q += 3
+                            onward = uniforms[q + 1] < 0.5
+                        q += 2
                         outcome = CHANGED
                         continue
                     # Phonons: Newton's rates, down (N + 1 - f)/2 and up (N + f)/2 for each final
-                    # direction, f the frozen occupation there; full below the axis, empty above.
+                    # direction, f the trial occupation there; full below the axis, empty above.
                     k = 0
-                    while k < phonon_meV.size - 1 and v >= phonon_bound[k]:
-                        v -= phonon_bound[k]
+                    row = min(max(bin_ + 1, 0), top + 1)
+                    while k < phonon_meV.size - 1 and v >= phonon_bound[k, row]:
+                        v -= phonon_bound[k, row]
                         k += 1
                     v /= 0.5 * phonon_rate[k]
-                    most = phonon_number[k] + 1.0 + OVERSHOOT
                     for choice in range(4):
                         change = -phonon_meV[k] if choice < 2 else phonon_meV[k]
-                        place = np.int64(
-                            np.floor((energy + change - setting.first_meV) / setting.step_meV)
-                        )
-                        fine = np.int64((energy + change - setting.first_meV) * fine_per_meV)
-                        f = 1.0 if place < 0 else 0.0
-                        if 0 <= place < top:
+                        f = 1.0 if energy + change < first_meV else 0.0
+                        fine = np.int64((energy + change - first_meV) * fine_per_meV)
+                        if f == 0.0 and fine < reference.size:
                             f = reference[fine]
-                            d = occupation[choice & 1, place, cell]
-                            f += d if choice < 2 else setting.newton * d
-                        chance = phonon_number[k] + (1.0 - f if choice < 2 else f)
-                        v -= min(max(chance, 0.0), most)
+                        if trial is not None:
+                            f += deviation(choice & 1, energy + change, cell, part, trial)
+                        v -= phonon_number[k] + (1.0 - f if choice < 2 else f)
                         if v < 0.0:
                             new = energy + change
                             new_kept = new
