@@ -26,7 +26,7 @@ from carriersim.result import (
 from carriersim.scenario import load, to_yaml
 
 SCENARIO, SUMMARY, FIELDS, PROFILE = "scenario.yaml", "summary.json", "fields.npz", "profile.csv"
-FIGURES = ("profile", "occupation", "resistance")
+FIGURES = ("profile", "occupation", "resistance", "departure", "temperatures", "heat")
 OURS = {SCENARIO, SUMMARY, FIELDS, PROFILE}
 OURS |= {f"{name}.{kind}" for name in FIGURES for kind in ("png", "svg")}
 

@@ -1,12 +1,24 @@
-"""Results made from the closed series law plus noise, to try tables and figures without a run."""
+"""Results made from closed forms plus noise, to try tables and figures without a run.
 
+`fake_result`: elastic channels, from the series law. `relaxing_result`: one scatterer, relaxation
+that keeps the direction, and probes that take every carrier.
+"""
+
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
 from itertools import pairwise
+from unittest.mock import patch
 
 import numpy as np
 
 from carriersim import scenario as scenarios
-from carriersim.constants import AMPERE_PER_MEV, CONDUCTANCE_QUANTUM_S, WATT_PER_MEV2
-from carriersim.fermi import difference, minus_slope, occupation
+from carriersim.constants import (
+    AMPERE_PER_MEV,
+    BOLTZMANN_MEV_PER_K,
+    CONDUCTANCE_QUANTUM_S,
+    WATT_PER_MEV2,
+)
+from carriersim.fermi import carrier_temperature, difference, minus_slope, occupation
 from carriersim.result import (
     Estimate,
     FourPoint,
@@ -27,11 +39,22 @@ scattering:
   points: [{position_nm: 40, transmission: 0.4}, {position_nm: 70, transmission: 0.7}]
 """
 
+RELAXING = """
+name: relaxing behind one defect
+channel: {length_nm: 100}
+contacts: {bias_mV: 100, temperature_K: 77}
+scattering: {points: [{position_nm: 40, transmission: 0.4}]}
+relaxation: {mechanisms: [{kind: bath, path_nm: 20, direction: kept}]}
+"""
 
-def fake_result(text=MIXED, changes=None, *, seed=0, noise=0.003, energies=240, **overrides):
+
+def fake_result(
+    text=MIXED, changes=None, *, seed=0, noise=0.003, energies=240, hot_meV=0.0, **overrides
+):
     """A Result of a scenario (YAML text), d = 1, whose paths and modes are plain numbers.
 
-    noise: relative standard error of everything; overrides: fields of Result.
+    noise: relative standard error of everything; hot_meV: additional energies on both sides;
+    overrides: fields of Result.
     """
     scenario = scenarios.read_text(text, changes=changes)
     rng = np.random.default_rng(seed)
@@ -54,7 +77,7 @@ def fake_result(text=MIXED, changes=None, *, seed=0, noise=0.003, energies=240, 
         )
     )
     centres = 0.5 * (edges[1:] + edges[:-1])
-    span = 0.0862 * max(hot, cold) * 12.0 + 0.1 * abs(bias) + 0.05
+    span = 0.0862 * max(hot, cold) * 12.0 + 0.1 * abs(bias) + 0.05 + hot_meV
     energy = np.linspace(min(bias, 0.0) - span, max(bias, 0.0) + span, energies)
 
     rate = np.full(centres.size, 1.0 / (_path(scenario.scattering) or np.inf))
@@ -223,6 +246,7 @@ def _breakdown(scenario, points, ballistic, estimate):
     sections = scenario.scattering.sections
     cuts = {place for place, _ in points} | {0.0, length}
     cuts |= {place for s in sections for place in (s.from_nm, s.to_nm)}
+    cuts |= {probe.position_nm for probe in scenario.probes if probe.coupling > 0.0}
     cuts = sorted(cuts)
     for start, end in pairwise(cuts):
         path = _path(scenario.scattering)
@@ -234,3 +258,209 @@ def _breakdown(scenario, points, ballistic, estimate):
         name = f"{mechanism} {start:g} to {end:g} nm"
         parts.append(Part(name, "piece", value, None, start, end, mechanism))
     return tuple(parts)
+
+
+@contextmanager
+def relaxation_allowed():
+    """Scenarios with relaxation and coupled probes can be read within."""
+    with patch("carriersim.scenario.refuse_unsupported", lambda document: []):
+        yield
+
+
+def relaxing_result(changes=None, text=RELAXING, *, seed=0, noise=0.003, energies=400, **overrides):
+    """A Result of a channel with relaxation: exact fields plus noise.
+
+    One kept mechanism, bath or carriers (a phonon is taken for a bath), point scatterers no more
+    than one between two stations; stations are contacts and coupled probes, which take all that
+    arrives (coupling 1). For bias 0 the fields are those of the elastic channel.
+    """
+    with relaxation_allowed():
+        scenario = scenarios.read_text(text, changes=changes)
+        kinds = {mechanism.kind for mechanism in scenario.relaxation.mechanisms}
+        # Carriers get as hot as k T_e = 0.28 eV.
+        hot = 2.2 * abs(scenario.contacts.bias_mV) if "carriers" in kinds else 0.0
+        result = fake_result(text, changes, seed=seed, noise=noise, hot_meV=hot, energies=energies)
+    if not result.linear_response:
+        rng = np.random.default_rng(seed + 1)
+        result = replace(result, **_relaxed_quantities(result, noise, rng))
+    return replace(result, **overrides)
+
+
+@dataclass(frozen=True)
+class _Relaxing:
+    """Fields of a relaxing channel: f, and the equilibria that f tends to, each (2, E, cells)."""
+
+    f: np.ndarray
+    towards: np.ndarray
+    stations: list  # (place, mu, emitted occupation) of contacts and probes
+    ends: list  # f+ and f- at both ends of each stretch between stations, (2, 2, E)
+    drop: float  # mu+ - mu-, the same everywhere
+
+
+def _relaxed_quantities(result, noise, rng):
+    """The fields of a Result that relaxation changes."""
+    field = _relax(result)
+    widths = np.diff(result.energy_edges_meV)
+    f = np.concatenate([field.f, field.f.mean(axis=0, keepdims=True)])
+    number, energy = _moments(result, f)
+    kelvin = carrier_temperature(number, energy)
+    local = np.array([_fermi(result, *pair) for pair in zip(number[2], kelvin[2], strict=True)]).T
+    scale = BOLTZMANN_MEV_PER_K * np.maximum(kelvin[2], 1e-3)
+    departure = np.sqrt(((f[2] - local) ** 2 * widths[:, None]).sum(axis=0) / scale)
+    mechanisms = result.scenario.relaxation.mechanisms
+    rate = sum(1.0 / m.path_nm for m in mechanisms if m.kind != "carriers")
+    lost = ((field.f - field.towards).sum(axis=0) * (result.energy_meV * widths)[:, None]).sum(0)
+    power = WATT_PER_MEV2 * result.scenario.channel.degeneracy * rate * lost
+    bias = result.scenario.contacts.bias_mV
+    size = np.abs(f[0] - f[1]).max()
+    spread = np.abs(kelvin - result.scenario.bath_temperature_K)
+    spread += 0.1 * np.minimum(abs(bias) / BOLTZMANN_MEV_PER_K, kelvin)
+    values = {
+        "f_plus": (f[0], noise * (np.abs(f[0] - f[0, :, -1:]) + 0.02 * size)),
+        "f_minus": (f[1], noise * (np.abs(f[1] - f[1, :, -1:]) + 0.02 * size)),
+        "mu_plus_meV": (number[0], noise * abs(bias)),
+        "mu_minus_meV": (number[1], noise * abs(bias)),
+        "mu_meV": (number[2], noise * abs(bias)),
+        "carrier_temperature_plus_K": (kelvin[0], noise * spread[0]),
+        "carrier_temperature_minus_K": (kelvin[1], noise * spread[1]),
+        "carrier_temperature_K": (kelvin[2], noise * spread[2]),
+        "departure": (departure, 3.0 * noise * (departure + 0.1 * departure.max())),
+        "lattice_power_W_per_nm": (power, noise * (5.0 * np.abs(power) + np.abs(power).max())),
+    }
+    errors = {name: np.broadcast_to(e, v.shape).copy() for name, (v, e) in values.items()}
+    drawn = {
+        name: value + errors[name] * rng.standard_normal(value.shape)
+        for name, (value, _) in values.items()
+    }
+    return drawn | {"errors": errors} | _relaxed_estimates(result, field, noise)
+
+
+def _relaxed_estimates(result, field, noise):
+    """Resistance, parts, probes and heat; without noise in the values, so that they add up."""
+    scenario = result.scenario
+    energy = result.energy_meV * np.diff(result.energy_edges_meV)
+    bias = scenario.contacts.bias_mV
+    channel = scenario.channel.degeneracy * scenario.channel.modes
+    ballistic = result.ballistic_resistance_ohm
+    resistance = ballistic * bias / field.drop
+
+    def estimate(value):
+        return Estimate(float(value), abs(float(value)) * noise)
+
+    currents = [[energy @ (end[0] - end[1]) for end in ends] for ends in field.ends]
+    left = bias * field.drop - currents[0][0]
+    taken = [before[1] - after[0] for before, after in pairwise(currents)]
+    right = currents[-1][1]
+    lattice = bias * field.drop - left - right - sum(taken)
+    if {m.kind for m in scenario.relaxation.mechanisms} <= {"carriers"}:
+        lattice = 0.0  # but for the energies between the axis' points
+    watt = WATT_PER_MEV2 * channel
+    mus = {place: mu for place, mu, _ in field.stations}
+    taken = dict(zip([place for place, *_ in field.stations[1:-1]], taken, strict=True))
+    probes = [probe.position_nm for probe in scenario.probes]
+    readings = [mus.get(x, np.interp(x, result.x_nm, result.mu_meV)) for x in probes]
+    heats = [estimate(watt * taken.get(x, 0.0)) for x in probes]
+    parts = [
+        replace(part, resistance_ohm=estimate(part.resistance_ohm.value))
+        for part in result.breakdown or ()
+    ]
+    parts += [
+        Part(f"probe {i + 1}", "probe", estimate(ballistic), position_nm=x)
+        for i, x in enumerate(taken)
+    ]
+    return {
+        "resistance_ohm": estimate(resistance) if result.breakdown else None,
+        "current_A": estimate(1e-3 * bias / resistance),
+        "breakdown": tuple(parts) if result.breakdown else None,
+        "probes": tuple(
+            ProbeReading(x, Estimate(float(mu), noise * abs(bias)))
+            for x, mu in zip(probes, readings, strict=True)
+        ),
+        "heat_W": Heat(
+            estimate(watt * left), estimate(watt * right), estimate(watt * lattice), tuple(heats)
+        ),
+    }
+
+
+def _relax(result):
+    """Solve the channel, stretch by stretch between stations."""
+    scenario, energy = result.scenario, result.energy_meV
+    length, bias = scenario.channel.length_nm, scenario.contacts.bias_mV
+    bath = scenario.bath_temperature_K
+    points = [(p.position_nm, p.transmission) for p in scenario.scattering.points]
+    probes = [probe for probe in scenario.probes if probe.coupling == 1.0]
+    cuts = [0.0, *(probe.position_nm for probe in probes), length]
+    scatterers = []
+    for start, stop in pairwise(cuts):
+        inside = [point for point in points if start < point[0] < stop]
+        scatterers.append(inside[0] if inside else (0.5 * (start + stop), 1.0))
+    # Full probes are in series: R/R_B = 1/T of every stretch (Datta 1995).
+    resistances = [1.0 / transmission for _, transmission in scatterers]
+    drop = bias / sum(resistances)
+    mus = bias - drop * np.cumsum([0.0, *resistances])
+    kelvin = [bath if p.temperature_K is None else p.temperature_K for p in probes]
+    kelvin = [scenario.left_temperature_K, *kelvin, scenario.right_temperature_K]
+    emitted = [_fermi(result, mu, t) for mu, t in zip(mus, kelvin, strict=True)]
+    f, towards = (np.empty((2, energy.size, result.x_nm.size)) for _ in range(2))
+    ends = []
+    for index, (start, stop) in enumerate(pairwise(cuts)):
+        inside = (result.x_nm > start) & (result.x_nm < stop)
+        places = np.concatenate([[start], result.x_nm[inside], [stop]])
+        own = _stretch(result, places, *emitted[index : index + 2], *scatterers[index])
+        f[:, :, inside], towards[:, :, inside] = (values[:, :, 1:-1] for values in own)
+        ends.append((own[0][:, :, 0], own[0][:, :, -1]))
+    return _Relaxing(f, towards, list(zip(cuts, mus, emitted, strict=True)), ends, drop)
+
+
+def _stretch(result, places, left, right, scatterer_nm, transmission):
+    """f± and what they tend to, (2, E, places) each, between two stations and one scatterer.
+
+    Behind the scatterer f+ = F + [T f+ + (1 - T) f- - F] exp(-(x - x_s)/path), F the equilibrium of
+    the same number (carriers: and energy), which a kept mechanism and a ballistic way don't change.
+    """
+    path = 1.0 / sum(1.0 / m.path_nm for m in result.scenario.relaxation.mechanisms)
+
+    def relaxed(start, distance):
+        end = _equilibrium(result, start)[:, None]
+        return end + (start[:, None] - end) * np.exp(-np.abs(distance) / path), end
+
+    into = [relaxed(left, scatterer_nm - places[:1])[0][:, 0]]
+    into += [relaxed(right, places[-1:] - scatterer_nm)[0][:, 0]]
+    out = [transmission * a + (1.0 - transmission) * b for a, b in (into, into[::-1])]
+    before = places < scatterer_nm
+    f, towards = [], []
+    for direct, scattered, first, station in (
+        (left, out[0], before, places[0]),
+        (right, out[1], ~before, places[-1]),
+    ):
+        near, near_end = relaxed(direct, places - station)
+        far, far_end = relaxed(scattered, places - scatterer_nm)
+        f.append(np.where(first, near, far))
+        towards.append(np.where(first, near_end, far_end))
+    return np.array(f), np.array(towards)
+
+
+def _equilibrium(result, f):
+    """The Fermi function that a mechanism drives f (E,) to."""
+    number, energy = _moments(result, f[None, :, None])
+    kelvin = result.scenario.bath_temperature_K
+    if result.scenario.relaxation.mechanisms[0].kind == "carriers":
+        kelvin = float(carrier_temperature(number, energy)[0, 0])
+    return _fermi(result, float(number[0, 0]), kelvin)
+
+
+def _moments(result, f):
+    """n and u, (k, cells), of f (k, E, cells): about F(E; 0, T_b), whose own are known."""
+    bath = result.scenario.bath_temperature_K
+    excess = f - _fermi(result, 0.0, bath)[:, None]
+    widths = np.diff(result.energy_edges_meV)
+    background = (np.pi * BOLTZMANN_MEV_PER_K * bath) ** 2 / 6.0
+    number = np.einsum("kec,e->kc", excess, widths)
+    return number, background + np.einsum("kec,e->kc", excess, widths * result.energy_meV)
+
+
+def _fermi(result, mu, kelvin, parts=16):
+    """F(E; mu, T) as a run gives it: the mean over each energy bin."""
+    edges = result.energy_edges_meV
+    fine = np.linspace(edges[:-1], edges[1:], 2 * parts + 1)[1::2]
+    return occupation(fine, mu, kelvin).mean(axis=0)

@@ -2,13 +2,16 @@
 
 from pathlib import Path
 
-from carriersim.figures import occupation, profile, resistance
+from carriersim.figures import departure, heat, occupation, profile, resistance, temperatures
 from carriersim.figures.style import STYLE, Style, own_settings
 
 _FIGURES = {
     "profile": profile.make_figure,
     "occupation": occupation.make_figure,
     "resistance": resistance.make_figure,
+    "departure": departure.make_figure,
+    "temperatures": temperatures.make_figure,
+    "heat": heat.make_figure,
 }
 # Without versions and dates in the files the same result gives the same bytes. Light compression
 # costs a tenth in size and saves two thirds of the time of writing.
@@ -22,7 +25,8 @@ def save_all(result, directory, style: Style = STYLE) -> list[Path]:
     """Write every figure that has a meaning for `result` as .png and .svg into `directory`.
 
     Returns the paths written. `resistance` is left out where there is no breakdown (the reason is
-    in `result.why`). The same result gives the same bytes. Raises OSError where it cannot write.
+    in `result.why`); `departure`, `temperatures` and `heat` are drawn where energies relax at a
+    bias. The same result gives the same bytes. Raises OSError where it cannot write.
     """
     directory = Path(directory)
     written = []

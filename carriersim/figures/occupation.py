@@ -4,15 +4,36 @@ import numpy as np
 
 from carriersim import fermi
 from carriersim.constants import BOLTZMANN_MEV_PER_K
-from carriersim.figures.style import FILLING, STYLE, Style, dress, new_figure, place, ticks, write
-from carriersim.formatting import format_number, length_scale, unit_scale
+from carriersim.figures.along import jump_places
+from carriersim.figures.energies import (
+    colour_bar,
+    energy_unit,
+    energy_window,
+    equilibrium,
+    largest_slope,
+    pixel_rows,
+    power_of,
+    sample,
+    times_ten,
+)
+from carriersim.figures.style import (
+    FILLING,
+    MISSING_AND_EXTRA,
+    STYLE,
+    Style,
+    dress,
+    new_figure,
+    place,
+    ticks,
+    write,
+)
+from carriersim.formatting import format_number, length_scale
 
-_PIXELS = (300, 240)  # of a map, along x and along energy
-_SHOWN = 0.005  # the energy axis ends where the contacts are this close to full or empty
 _LETTERS = "abcde"
 # From these biases on (in kT) occupations themselves are shown, in maps and in cuts.
 _SMALL_BIAS_KT = 2.0
 _WIDE_BIAS_KT = 8.0
+_BOTH_SIGNS = 0.3  # differences of both signs, this much alike, get a colour for each sign
 
 
 def make_figure(result, style: Style = STYLE):
@@ -25,14 +46,15 @@ def make_figure(result, style: Style = STYLE):
 def draw(figure, result, style: Style = STYLE, places_nm=None):
     """Draw two maps f(x, E), one a direction, and cuts at some places; return all axes.
 
-    Energies run upwards in every panel. A cut shows both directions beside the Fermi function that
-    holds as many carriers at the lattice temperature. places_nm: up to five places of cuts (default
-    four: the ends and the two sides of the largest jump). With bias 0 the maps are df/d(eV), 1/meV.
+    Energies run upwards in every panel. A cut shows both directions, with bands of one standard
+    error, beside the Fermi function that holds as many carriers at the lattice temperature.
+    places_nm: up to five places of cuts (default: the ends and the two sides of the largest jump,
+    with relaxation one more). With bias 0 the maps are df/d(eV), 1/meV.
     """
     factor, unit = length_scale(result.scenario.channel.length_nm)
     cells = _cut_cells(result, places_nm)
-    window = _energy_window(result)
-    e_factor, e_unit = _energy_unit(window)
+    window = energy_window(result)
+    e_factor, e_unit = energy_unit(window)
     extent = (
         result.cell_edges_nm[0] * factor,
         result.cell_edges_nm[-1] * factor,
@@ -42,7 +64,7 @@ def draw(figure, result, style: Style = STYLE, places_nm=None):
     energy_label = f"energy ({e_unit})"
     base, scale, label = _measure(result, _SMALL_BIAS_KT)
     images = [
-        (_sample(result, getattr(result, name), window) - _rows(result, base, window)) * scale
+        (sample(result, getattr(result, name), window) - _rows(result, base, window)) * scale
         for name in ("f_plus", "f_minus")
     ]
     colours = _colours(result, images, base)
@@ -64,16 +86,10 @@ def draw(figure, result, style: Style = STYLE, places_nm=None):
         _mark_cuts(ax, result, cells, factor, style)
         maps.append(ax)
     bar = place(figure, width - right + 0.12, right - 0.25, height - 2.52, 0.42)
-    _colour_bar(figure, picture, bar, label, style)
+    colour_bar(figure, picture, bar, label, style)
 
     cuts = _cuts(figure, result, cells, window, (factor, unit), (e_factor, energy_label), style)
     return [*maps, bar, *cuts]
-
-
-def _top(result):
-    """The largest df/d(eV) but for outliers, 1/meV."""
-    top = max(np.nanpercentile(getattr(result, name), 99.8) for name in ("f_plus", "f_minus"))
-    return float(top) if top > 0.0 else 1.0
 
 
 def _colours(result, images, base):
@@ -82,60 +98,18 @@ def _colours(result, images, base):
         return {"cmap": FILLING, "vmin": 0.0, "vmax": 1.0}
     low, high = np.nanpercentile(np.concatenate(images), (0.2, 99.8))
     low, high = min(low, 0.0), max(high, 0.0)
+    if min(-low, high) > _BOTH_SIGNS * max(-low, high):
+        largest = max(-low, high)
+        return {"cmap": MISSING_AND_EXTRA, "vmin": -largest, "vmax": largest}
     if -low > high:
         # Holes: the more are missing the darker.
         return {"cmap": FILLING.reversed(), "vmin": low, "vmax": 0.0 if high < 0.1 * -low else high}
     return {"cmap": FILLING, "vmin": 0.0 if -low < 0.1 * high else low, "vmax": high or 1.0}
 
 
-def _energy_unit(window):
-    largest = max(abs(window[0]), abs(window[1]))
-    if 1e-1 <= largest < 1e4:
-        return 1.0, "meV"
-    factor, unit = unit_scale(largest * 1e-3, "eV")
-    return factor * 1e-3, unit
-
-
-def _energy_window(result):
-    """Energies (meV) between which something happens, inside the axis of the result."""
-    energy, scenario = result.energy_meV, result.scenario
-    levels = (scenario.contacts.bias_mV, 0.0)
-    temperatures = (scenario.left_temperature_K, scenario.right_temperature_K)
-    reach = np.log(1.0 / _SHOWN - 1.0) * BOLTZMANN_MEV_PER_K
-    low = min(mu - reach * t for mu, t in zip(levels, temperatures, strict=True))
-    high = max(mu + reach * t for mu, t in zip(levels, temperatures, strict=True))
-    room = 0.08 * (high - low)
-    low, high = low - room, high + room
-    # Carriers may also be found outside, where something other than the contacts put them.
-    both = np.concatenate([result.f_plus, result.f_minus], axis=1)
-    if result.linear_response:
-        busy = np.nanmean(both, axis=1) > 0.02 * _top(result)
-    else:
-        filling = np.nanmean(both, axis=1)
-        busy = (filling > 0.02) & (filling < 0.98)
-    if busy.any():
-        low, high = min(low, energy[busy][0]), max(high, energy[busy][-1])
-    ends = result.energy_edges_meV[[0, -1]]
-    low, high = max(low, ends[0]), min(high, ends[1])
-    return (low, high) if low < high else tuple(ends)
-
-
-def _sample(result, values, window):
-    """Values on an even grid of pixels: cells and energies may have any widths."""
-    x = np.linspace(*result.cell_edges_nm[[0, -1]], 2 * _PIXELS[0] + 1)[1::2]
-    cell = np.clip(np.searchsorted(result.cell_edges_nm, x) - 1, 0, values.shape[1] - 1)
-    return values[np.ix_(_pixel_rows(result, window), cell)]
-
-
-def _pixel_rows(result, window):
-    e = np.linspace(*window, 2 * _PIXELS[1] + 1)[1::2]
-    row = np.searchsorted(result.energy_edges_meV, e) - 1
-    return np.clip(row, 0, result.energy_meV.size - 1)
-
-
 def _rows(result, base, window):
     """A function of energy for every row of pixels; 0 for none."""
-    return 0.0 if base is None else base[_pixel_rows(result, window), None]
+    return 0.0 if base is None else base[pixel_rows(result, window), None]
 
 
 def _mark_cuts(ax, result, cells, factor, style):
@@ -157,25 +131,8 @@ def _mark_cuts(ax, result, cells, factor, style):
         )  # fmt: skip
 
 
-def _colour_bar(figure, picture, ax, label, style):
-    bar = figure.colorbar(picture, cax=ax)
-    bar.outline.set_visible(False)
-    ax.tick_params(labelsize=style.small, length=3, width=0.8, color=style.soft)
-    ticks(ax, y=4, steps=(1, 2, 5, 10))
-    write(ax, style, y=label, beside=-0.62)
-
-
-def _power(value):
-    """The power of ten to take out of numbers up to `value`."""
-    return int(np.floor(np.log10(value)))
-
-
 def _slope_label(power):
-    return f"df/d(eV) (10{_superscript(power)} per meV)" if power else "df/d(eV) (1/meV)"
-
-
-def _superscript(power):
-    return str(power).translate(str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹"))
+    return f"df/d(eV) ({times_ten(power)} per meV)" if power else "df/d(eV) (1/meV)"
 
 
 def _cut_cells(result, places_nm):
@@ -188,17 +145,18 @@ def _cut_cells(result, places_nm):
     def at(share):
         return int(np.clip(np.searchsorted(edges, edges[0] + share * length) - 1, 0, cells - 1))
 
-    spaced = [at(share) for share in (0.03, 0.35, 0.65, 0.97)]
-    scatterers = [point.position_nm for point in result.scenario.scattering.points]
-    borders = np.flatnonzero(np.isin(edges[1:-1], scatterers))
-    if borders.size:
-        jumps = np.abs(np.diff(result.mu_meV))[borders]
-        largest = int(borders[np.argmax(np.nan_to_num(jumps))])
-        whole = np.nanmax(result.mu_meV) - np.nanmin(result.mu_meV)
-        if jumps.max() > 0.15 * whole:
-            picks = {at(0.03), largest, largest + 1, at(0.97)}
-            return np.array(sorted(picks))
-    return np.unique(spaced)
+    jumps = np.abs(np.diff(result.mu_meV)) * np.isin(edges[1:-1], jump_places(result))
+    whole = np.nanmax(result.mu_meV) - np.nanmin(result.mu_meV)
+    if jumps.size and np.nanmax(jumps) > 0.15 * whole:
+        largest = int(np.nanargmax(jumps))
+        picks = {at(0.03), largest, largest + 1, at(0.97)}
+        if result.relaxes:  # how far it has relaxed half way to the farther contact
+            away = 0.5 if 2.0 * result.x_nm[largest] < edges[0] + edges[-1] else -0.5
+            where = (edges[largest + 1] - edges[0]) / length
+            picks.add(at(where + away * (1.0 - where if away > 0.0 else where)))
+        return np.array(sorted(picks))
+    shares = (0.03, 0.27, 0.5, 0.73, 0.97) if result.relaxes else (0.03, 0.35, 0.65, 0.97)
+    return np.unique([at(share) for share in shares])
 
 
 def _cuts(figure, result, cells, window, x_scale, e_scale, style):
@@ -224,6 +182,7 @@ def _cuts(figure, result, cells, window, x_scale, e_scale, style):
             values = getattr(result, name)[:, cell]
             shown = (values - base)[inside] * scale
             ax.plot(shown, energy, color=colour, ls=dashes, lw=style.line, label=direction)
+            _band(ax, result, name, cell, inside, shown, energy, scale, colour)
             same = same_filling(result, values, temperature)
             if same is not None:
                 shown = (same - base)[inside] * scale
@@ -231,6 +190,8 @@ def _cuts(figure, result, cells, window, x_scale, e_scale, style):
                         label=same_label if name == "f_minus" else None)  # fmt: skip
         place_text = format_number(result.x_nm[cell] * factor, unit, 4)
         write(ax, style, y="" if index else energy_label, title=f"{_LETTERS[index]}: {place_text}")
+        if cells.size > 4:
+            ax.title.set_fontsize(style.small)
         ax.set_ylim(window[0] * e_factor, window[1] * e_factor)
         ticks(ax, x=2, y=0 if index else 4)
         axes.append(ax)
@@ -245,6 +206,14 @@ def _cuts(figure, result, cells, window, x_scale, e_scale, style):
     return axes
 
 
+def _band(ax, result, name, cell, inside, shown, energy, scale, colour):
+    """One standard error to both sides of a cut."""
+    errors = result.errors.get(name)
+    if errors is not None:
+        error = np.abs(np.nan_to_num(errors[inside, cell])) * scale
+        ax.fill_betweenx(energy, shown - error, shown + error, color=colour, alpha=0.3, lw=0)
+
+
 def _measure(result, bias_kT):
     """What is shown: (occupation to take off, None for none; factor; label).
 
@@ -252,19 +221,19 @@ def _measure(result, bias_kT):
     shown at biases below bias_kT.
     """
     if result.linear_response:
-        power = _power(_top(result))
+        power = power_of(largest_slope(result))
         return None, 10.0**-power, _slope_label(power)
     scenario = result.scenario
     hottest = max(scenario.left_temperature_K, scenario.right_temperature_K)
     if abs(scenario.contacts.bias_mV) >= bias_kT * BOLTZMANN_MEV_PER_K * hottest:
         return None, 1.0, "occupation f"
-    base = fermi.occupation(result.energy_meV, 0.0, scenario.right_temperature_K)
+    base = equilibrium(result, 0.0, scenario.right_temperature_K)
     largest = np.nanmax(np.abs(np.stack([result.f_plus, result.f_minus]) - base[:, None]))
-    power = _power(largest) if largest > 0.0 else 0
+    power = power_of(largest) if largest > 0.0 else 0
     label = "f − f of the right contact"
     if power >= -1:
         return base, 1.0, label
-    return base, 10.0**-power, f"{label} (10{_superscript(power)})"
+    return base, 10.0**-power, f"{label} ({times_ten(power)})"
 
 
 def _share_axis(axes):
@@ -294,7 +263,7 @@ def same_filling(result, values, temperature_K):
         return shape * (weight @ values) / whole if whole > 0.0 else None
 
     def excess(mu):
-        return weight @ (fermi.occupation(energy, mu, temperature_K) - values)
+        return weight @ (equilibrium(result, mu, temperature_K) - values)
 
     low, high = energy[0], energy[-1]
     if excess(low) > 0.0 or excess(high) < 0.0:
@@ -303,7 +272,7 @@ def same_filling(result, values, temperature_K):
     for _ in range(int(np.ceil(np.log2(2000.0 * energy.size)))):
         middle = 0.5 * (low + high)
         low, high = (middle, high) if excess(middle) < 0.0 else (low, middle)
-    return fermi.occupation(energy, 0.5 * (low + high), temperature_K)
+    return equilibrium(result, 0.5 * (low + high), temperature_K)
 
 
 def _modes(scenario, energy):

@@ -2,11 +2,10 @@
 
 import numpy as np
 
+from carriersim.figures.rows import COLUMNS, SHOWN_ERROR, error_of, value_of, write_columns
 from carriersim.figures.style import STYLE, Style, dress, new_figure, place, thin, ticks, write
 from carriersim.formatting import (
     format_place,
-    format_scaled,
-    format_share,
     length_scale,
     order_parts,
     split_parts,
@@ -17,7 +16,8 @@ _MOST_ROWS = 12
 _KEPT_ROWS = 11
 _MOST_SEGMENTS = 2000  # of more parts only the outline is drawn along the channel
 _TOP, _ROW, _BETWEEN, _LOWER, _BOTTOM = 0.3, 0.26, 0.78, 1.75, 0.5  # heights in inches
-_LONGEST_NAME = 30
+_LONGEST_NAME = 34  # letters of a part with its place; of longer names the end is cut
+_LETTER = 0.065  # inches
 
 
 def make_figure(result, style: Style = STYLE):
@@ -28,10 +28,12 @@ def make_figure(result, style: Style = STYLE):
     if not _has_parts(result):
         return None
     parts = order_parts(result.breakdown, result.scenario.channel.length_nm)
-    block = len(_rows(parts, result)) * _ROW
+    rows = _rows(parts, result)
+    block = len(rows) * _ROW
+    left = min(0.12 + _LETTER * max(len(label) for label, *_ in rows), 2.25)
     height = _TOP + block + _BETWEEN + _LOWER + _BOTTOM
     figure = new_figure(style.width, height, style)
-    draw(place(figure, 2.05, 1.75, height - _TOP - block, _TOP), result, style)
+    draw(place(figure, left, COLUMNS, height - _TOP - block, _TOP), result, style)
     draw_along(place(figure, 0.72, 0.2, _BOTTOM, _TOP + block + _BETWEEN), result, style)
     return figure
 
@@ -65,6 +67,8 @@ def _label(part, length_nm):
     name = part.mechanism if part.kind == "piece" and part.mechanism else part.name
     room = _LONGEST_NAME - len(where)
     if len(name) > room:
+        name = name.replace("optical phonon", "phonon")
+    if len(name) > room:
         name = name[: max(room - 1, 3)] + "…"
     return f"{name}, {where}"
 
@@ -86,12 +90,11 @@ def draw(ax, result, style: Style = STYLE):
     reached = 0.0
     starts, sizes, errors, colours = [], [], [], []
     for _, estimate, kind in rows:
-        value = getattr(estimate, "value", estimate)
         starts.append(reached * factor)
-        sizes.append(value * factor)
-        errors.append((getattr(estimate, "error", None) or 0.0) * factor)
+        sizes.append(value_of(estimate) * factor)
+        errors.append(error_of(estimate) * factor)
         colours.append(style.colour_of(kind))
-        reached += value
+        reached += value_of(estimate)
     at = np.arange(len(rows))
     ends = np.add(starts, sizes)
     bars = ax.barh(at, sizes, left=starts, height=0.66, color=colours, ec=style.ink, lw=0.6,
@@ -99,11 +102,11 @@ def draw(ax, result, style: Style = STYLE):
     if rows[-1][2] == "rest":
         bars[-1].set(hatch="////", facecolor="white")
     ax.vlines(ends[:-1], at[:-1] + 0.33, at[1:] - 0.33, color=style.soft, lw=0.7)
-    seen = np.nan_to_num(errors) > 0.004 * total * factor
+    seen = np.nan_to_num(errors) > SHOWN_ERROR * total * factor
     if seen.any():
         ax.errorbar(ends[seen], at[seen], xerr=np.array(errors)[seen], fmt="none",
                     ecolor=style.ink, elinewidth=1.0, capsize=2.0, zorder=4)  # fmt: skip
-    _columns(ax, rows, total, style)
+    write_columns(ax, [estimate for _, estimate, _ in rows], total, "Ω", style)
     ax.set_ylim(len(rows) - 0.45, -0.55)
     low, high = min(0.0, ends.min()), max(0.0, ends.max())
     ax.set_xlim(low, high + 0.02 * (high - low))
@@ -113,22 +116,6 @@ def draw(ax, result, style: Style = STYLE):
     ticks(ax, x=4)
     write(ax, style, x=f"resistance, added up from the left ({unit})", below=0.34)
     return ax
-
-
-def _columns(ax, rows, total, style):
-    """Value, error and share at the right of each row."""
-    box = ax.get_position()
-    width = ax.figure.get_size_inches()[0] * box.width
-    kwargs = {"transform": ax.get_yaxis_transform(), "va": "center", "fontsize": style.small,
-              "color": style.ink}  # fmt: skip
-    head = {**kwargs, "va": "bottom", "color": style.soft, "ha": "right"}
-    ax.text(1.0 + 1.13 / width, -0.62, "± one std. error", **head)
-    ax.text(1.0 + 1.62 / width, -0.62, "share", **head)
-    for row, (_, estimate, _) in enumerate(rows):
-        value = getattr(estimate, "value", estimate)
-        error = getattr(estimate, "error", None)
-        ax.text(1.0 + 1.13 / width, row, format_scaled(value, error, "Ω", 4), ha="right", **kwargs)
-        ax.text(1.0 + 1.62 / width, row, format_share(value, total), ha="right", **kwargs)
 
 
 def draw_along(ax, result, style: Style = STYLE):

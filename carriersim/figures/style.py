@@ -34,6 +34,7 @@ class Style:
     point: str = "#3b3f8f"
     piece: str = "#e3b04b"
     probe: str = "#a8476b"
+    lattice: str = "#c9763a"
     right_dashes: object = "-"
     left_dashes: object = (0, (7, 1.2))
     mean_dashes: object = (0, (1.1, 1.1))
@@ -53,6 +54,12 @@ STYLE = Style()
 # Lightness falls evenly from empty (pale) to full (dark).
 FILLING = LinearSegmentedColormap.from_list(
     "filling", ["#fbf7ec", "#f0cf8e", "#cf8f5f", "#94526a", "#4b2f68", "#17163a"]
+)
+
+# Too few carriers (blue) and too many (brown): equally dark at both ends, pale where none differ.
+MISSING_AND_EXTRA = LinearSegmentedColormap.from_list(
+    "missing and extra",
+    ["#232a63", "#5366bd", "#b3bfe6", "#f7f5f0", "#ecc893", "#b5702a", "#552c0c"],
 )
 
 
