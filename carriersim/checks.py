@@ -7,6 +7,7 @@ not hide another.
 import math
 from collections.abc import Iterator
 from itertools import islice, pairwise
+from types import SimpleNamespace
 from typing import Any
 
 from carriersim.faults import Fault, KeyPath, found, key_text
@@ -17,12 +18,24 @@ from carriersim.yamlfile import Document
 _PATH_KEYS = ("mean_free_path_nm", "backscatter_path_nm")
 _SCATTERING: KeyPath = ("scattering",)
 _SIDES: tuple[KeyPath, ...] = (("contacts", "left"), ("contacts", "right"))
+_MECHANISMS: KeyPath = ("relaxation", "mechanisms")
+_LATTICE_KINDS = ("bath", "optical_phonon")
+_PARTS_OF_RELAXATION = ("bath", "carriers", "optical phonon", "optical phonons")
+
+# Memory of a relaxing run in its longest form, 14 windows and as many for dI/dV. Measured at 402
+# bins x 1250 cells x 64 batches, 2 threads: after 3 windows 0.4 GB with a bath, 0.7 GB with
+# phonons; each window more adds 48 bytes for every bin and cell and 64 for every cell and batch.
+MOST_GB = 4.0
+_BYTES_BIN_CELL, _BYTES_BATCH_CELL = 2000.0, 2000.0
+_BYTES_PENDING = 8.0  # for every bin, cell and batch: tallies that wait to be added up
+_MOST_AUTOMATIC = 400  # bins, unless a phonon asks for more
+_COUNTABLE = 1e12  # bins; from here on energies have nothing to do with each other
 
 
 def cross_faults(document: Document) -> list[Fault]:
     """Return all contradictions between the keys of a document."""
     checks = (_channel, _angles, _contacts, _paths, _sections, _random, _places, _tables)
-    checks += (_mechanisms, _elastic_modes, _simulation)
+    checks += (_mechanisms, _names, _elastic_modes, _simulation, _heat_share, _memory)
     return list(islice((fault for check in checks for fault in check(document)), MAX_FAULTS))
 
 
@@ -309,8 +322,13 @@ def _all_tables(value: Any, path: KeyPath) -> Iterator[KeyPath]:
                 yield from _all_tables(inner, (*path, index))
 
 
+def _relaxes(document: Document) -> bool:
+    coupled = any(_coupled(document, probe) for probe in _mappings(document, ("probes",)))
+    return coupled or any(_mappings(document, _MECHANISMS))
+
+
 def _mechanisms(document: Document) -> Iterator[Fault]:
-    for base in _mappings(document, ("relaxation", "mechanisms")):
+    for base in _mappings(document, _MECHANISMS):
         kind = document.get((*base, "kind"))
         direction, energy = (*base, "direction"), (*base, "energy_meV")
         if kind == "bath" and not _given(document, direction):
@@ -330,11 +348,24 @@ def _mechanisms(document: Document) -> Iterator[Fault]:
             yield document.fault(energy, "for optical_phonon only", why)
 
 
+def _names(document: Document) -> Iterator[Fault]:
+    """Paths may not be called like the parts of the breakdown that relaxation makes."""
+    if not any(_mappings(document, _MECHANISMS)):
+        return
+    for base in (_SCATTERING, *_mappings(document, (*_SCATTERING, "sections"))):
+        for key in _PATH_KEYS:
+            for entry in _mappings(document, (*base, key)):
+                path = (*entry, "name")
+                if document.get(path) in _PARTS_OF_RELAXATION:
+                    why = "with relaxation.mechanisms this is the name of a part of the resistance"
+                    yield document.fault(path, "another name", why)
+
+
 def _elastic_modes(document: Document) -> Iterator[Fault]:
     path: KeyPath = ("channel", "modes")
     if not isinstance(document.get(path), dict):
         return
-    if any(_mappings(document, ("relaxation", "mechanisms"))):
+    if any(_mappings(document, _MECHANISMS)):
         why = "modes against energy are for elastic runs, and there are relaxation.mechanisms"
         yield document.fault(path, "a number > 0", why)
     if any(_coupled(document, probe) for probe in _mappings(document, ("probes",))):
@@ -349,3 +380,118 @@ def _simulation(document: Document) -> Iterator[Fault]:
     if histories is not None and batches is not None and 1 <= histories < batches:
         allowed = f"an integer >= {batches:g} (simulation.batches)"
         yield document.fault(path, allowed, "fewer than one for each batch")
+
+
+def _heat_share(document: Document) -> Iterator[Fault]:
+    """An error of the lattice's share of I V can be reached only where there is such a share."""
+    path: KeyPath = ("simulation", "heat_share_error")
+    if not _given(document, path):
+        return
+    kinds = [document.get((*base, "kind")) for base in _mappings(document, _MECHANISMS)]
+    if not any(kind in _LATTICE_KINDS for kind in kinds):
+        why = "no mechanism gives heat to the lattice"
+        allowed = "with a bath or an optical_phonon in relaxation.mechanisms"
+        yield document.fault(path, allowed, why)
+    elif _number(document, ("contacts", "bias_mV")) == 0:
+        yield document.fault(path, "with a bias other than 0", "without a bias there is no heat")
+
+
+def _memory(document: Document) -> Iterator[Fault]:
+    """Relaxing runs hold tables of energy bins x cells: refuse what no memory would hold."""
+    cells = _number(document, ("simulation", "cells"), 200)
+    batches = _number(document, ("simulation", "batches"), 64)
+    if not _relaxes(document) or cells is None or batches is None or not 1 <= cells <= 100_000:
+        return
+    bins, phonon = _energy_bins(document)
+    if bins is None:
+        return
+    asked: KeyPath = ("simulation", "energy_bins")
+    if not bins < _COUNTABLE:
+        allowed = "contacts and mechanisms whose energies are of comparable size"
+        message = f"no number of bins covers the energies of this scenario; allowed: {allowed}"
+        yield document.message(phonon or ("contacts", "bias_mV"), message, allowed)
+        return
+    size = cells + _cuts(document)  # every piece between two cuts is rounded to whole cells
+    of_bin = _BYTES_BIN_CELL + _BYTES_PENDING * batches
+    of_cell = bins * of_bin + batches * _BYTES_BATCH_CELL
+    if size * of_cell <= MOST_GB * 1e9:
+        return
+    origin = "" if _given(document, asked) else ", automatic"
+    why = (
+        f"simulation.cells ({size:.0f} with cuts at scatterers and probes) times "
+        f"simulation.energy_bins ({bins:.6g}{origin}) need up to {1e-9 * size * of_cell:.3g} GB "
+        f"of memory with relaxation and {batches:.0f} batches"
+    )
+    choices = {
+        "cells with so many bins": MOST_GB * 1e9 / of_cell,
+        "bins with so many cells": (MOST_GB * 1e9 / size - batches * _BYTES_BATCH_CELL) / of_bin,
+    }
+    alone = _given(document, asked) and not _given(document, ("simulation", "cells"))
+    path = asked if alone else ("simulation", "cells")
+    if phonon and bins > 2 * (_number(document, asked) or _MOST_AUTOMATIC):
+        path, why = phonon, f"found {found(document.get(phonon))}; no bin may be wider, and {why}"
+        del choices["bins with so many cells"]
+    allowed = " or ".join(f"{int(most)} {what}" for what, most in choices.items() if most >= 1)
+    allowed = f"at most {allowed} ({MOST_GB:g} GB)" if allowed else "fewer simulation.batches"
+    if path == phonon:
+        allowed = f"a larger energy of the phonon, or {allowed}"
+    yield document.message(path, f"{why}; allowed: {allowed}", allowed)
+
+
+def _cuts(document: Document) -> int:
+    """Cells that cuts of the channel may add, at most."""
+    count = 0.0
+    for path in ((*_SCATTERING, "points"), ("probes",)):
+        count += sum(1 for _ in _mappings(document, path))
+    count += 2 * sum(1 for _ in _mappings(document, (*_SCATTERING, "sections")))
+    for group in _mappings(document, (*_SCATTERING, "random")):
+        low = _number(document, (*group, "from_nm"), 0.0) or 0.0
+        high = _number(document, (*group, "to_nm"), _length(document)) or 0.0
+        density = _number(document, (*group, "density_per_um"), 0.0) or 0.0
+        count += max(density * (high - low) / 1000, 0.0)
+        count += max(_number(document, (*group, "count"), 0.0) or 0.0, 0.0)
+    return int(min(count, MAX_POINTS + 1e5)) + 1 if count else 0
+
+
+def _energy_bins(document: Document) -> tuple[float | None, KeyPath | None]:
+    """Energy bins that the run will take, and the key of the phonon that sets their width.
+
+    None if the document's faults leave it open, inf if no number of bins would do.
+    """
+    common = _number(document, ("contacts", "temperature_K"))
+    left, right = (_number(document, (*side, "temperature_K"), common) for side in _SIDES)
+    bath = _number(document, ("relaxation", "bath_temperature_K"), right)
+    bias = _number(document, ("contacts", "bias_mV"))
+    asked = document.get(("simulation", "energy_bins"))
+    kinds: list[SimpleNamespace] = []
+    phonons: list[tuple[KeyPath, float | None]] = []
+    for base in _mappings(document, _MECHANISMS):
+        kinds.append(SimpleNamespace(kind=document.get((*base, "kind"))))
+        if kinds[-1].kind == "optical_phonon":
+            path = (*base, "energy_meV")
+            phonons.append((path, _number(document, path)))
+    kelvin = (left, right, bath)
+    valid = bias is not None and all(value is not None and value >= 0 for value in kelvin)
+    valid = valid and all(value is not None and value > 0 for _, value in phonons)
+    number = _number(document, ("simulation", "energy_bins"), 1)
+    if not valid or number is None or number < 1:
+        return None, None
+    # Without compiled code, but with numpy: only where a scenario relaxes.
+    import numpy as np
+
+    from carriersim.engine.energies import Window
+    from carriersim.engine.mechanisms import axis_of
+
+    scenario = SimpleNamespace(
+        bath_temperature_K=bath,
+        relaxation=SimpleNamespace(mechanisms=kinds),
+        simulation=SimpleNamespace(energy_bins=asked),
+    )
+    energies = np.array([value for _, value in phonons])
+    narrow = phonons[0][0] if phonons else None
+    try:
+        with np.errstate(all="ignore"):
+            bins = axis_of(scenario, Window(bias, left, right), energies).bins
+    except (ArithmeticError, ValueError):  # numbers beyond what floats hold
+        return math.inf, narrow
+    return float(bins), narrow

@@ -151,13 +151,10 @@ def _run(options):
         storage.check_place(place)
     except storage.PlaceError as error:
         return _refuse(error)
-    result = _simulate_interruptibly(scenario, options.workers)
+    result, why = _simulate_interruptibly(scenario, options.workers)
     if result is None:
-        print(
-            "carriersim: stopped before the first round was complete, nothing was written",
-            file=sys.stderr,
-        )
-        return INTERRUPTED
+        print(f"carriersim: {why}, nothing was written", file=sys.stderr)
+        return INTERRUPTED if "interrupted" in why else NOT_REACHED
     try:
         # After a Ctrl-C the results are due within a second, which drawing would exceed.
         interrupted = result.stopped_by == "interrupted"
@@ -186,9 +183,11 @@ def _status(result):
         return INTERRUPTED
     if result.converged:
         return DONE
+    from carriersim.report import unfinished
+
+    reason, remedy = unfinished(result)
     print(
-        f"carriersim: the asked error was not reached (stopped by {result.stopped_by}); "
-        "raise simulation.histories or simulation.max_seconds, or relative_error",
+        f"carriersim: not converged: {reason} (stopped by {result.stopped_by}); {remedy}",
         file=sys.stderr,
     )
     return NOT_REACHED
@@ -198,7 +197,7 @@ def _simulate_interruptibly(scenario, workers):
     """Simulate in a thread of its own, so that this one can answer a Ctrl-C at once.
 
     The first Ctrl-C (or a request to terminate) ends the run after its last whole round, a second
-    one raises KeyboardInterrupt. Returns None if no round was complete.
+    one raises KeyboardInterrupt. Returns (result, None), or (None, why) if there is no result.
     """
     from rich.console import Console
 
@@ -207,14 +206,14 @@ def _simulate_interruptibly(scenario, workers):
     from carriersim.runner import simulate
 
     stop = StopRequest()
-    outcome = {}
+    outcome = {"why": None}
     progress = report.progress(Console(stderr=True))
 
     def work():
         try:
             outcome["result"] = simulate(scenario, workers, stop, progress)
-        except NothingDone:
-            outcome["result"] = None
+        except NothingDone as error:
+            outcome.update(result=None, why=str(error))
         except BaseException as error:
             outcome["error"] = error
 
@@ -239,7 +238,7 @@ def _simulate_interruptibly(scenario, workers):
                 signal.signal(number, handler)
     if "error" in outcome:
         raise outcome["error"]
-    return outcome["result"]
+    return outcome["result"], outcome["why"]
 
 
 if __name__ == "__main__":

@@ -26,7 +26,8 @@ def format_estimate(value: float, error: float | None, unit: str = "") -> str:
     """Write a value with its error: '12.906 ± 0.021 kΩ'.
 
     The error is rounded to two significant digits and the value to the same decimal; both are in
-    `unit`. Without a usable error (None, nan) the value has six digits and the error reads n/a.
+    `unit`. Without a usable error (None, nan) the value has six digits and the error reads n/a; a
+    value without any error reads '12.9064 kΩ exact'.
     """
     tail = f" {unit}" if unit else ""
     if value is None or math.isnan(value):
@@ -39,7 +40,7 @@ def format_estimate(value: float, error: float | None, unit: str = "") -> str:
         return f"{format_number(value)} ± infinite{tail}"
     error = abs(error)
     if error == 0.0:
-        return f"{format_number(value)} ± 0{tail}"
+        return f"{format_number(value)}{tail} exact"
     largest = max(abs(value), error)
     if not _PLAIN[0] <= largest < _PLAIN[1]:
         power = _exponent(largest, 2)
@@ -102,7 +103,7 @@ def unit_scale(value: float, unit: str) -> tuple[float, str]:
 def format_scaled(value: float | None, error: float | None, unit: str, digits: int = 6) -> str:
     """format_estimate with a prefix that fits the value; without error (None) the value alone.
 
-    An error below 1e-9 of the value is rounding of a number that is exact, and written as 0.
+    An error below 1e-9 of the value is rounding of a number that is exact.
     """
     if value is None:
         return "n/a"

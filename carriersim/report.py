@@ -7,6 +7,7 @@ fall back to ASCII where the encoding knows no Greek.
 import math
 import time
 
+import numpy as np
 from rich.console import Console
 from rich.table import Table
 from rich.text import Text
@@ -26,7 +27,15 @@ from carriersim.formatting import (
     split_parts,
 )
 
-__all__ = ["NoProgress", "Progress", "format_estimate", "print_limits", "print_result", "progress"]
+__all__ = [
+    "NoProgress",
+    "Progress",
+    "format_estimate",
+    "print_limits",
+    "print_result",
+    "progress",
+    "unfinished",
+]
 
 CAUTION = (
     "Currents and powers are values of the model (fixed lattice temperature, no self-heating), not "
@@ -39,11 +48,14 @@ _MOST_PARTS, _KEPT_PARTS = 50, 10
 _MOST_PAIRS = 15  # four-point resistances and probes
 _MOST_LIMITS = 40
 _FAR = 4.0  # standard errors from an exact form that deserve a mark
+_SMALL_SHIFT = 0.1  # of the error; a smaller bias from noise is not worth a word
 
 _STOPPED = {
     "relative_error": "asked error reached",
+    "heat_share_error": "asked error of the heat share reached",
     "histories": "asked number of histories done",
     "max_seconds": "time limit reached",
+    "windows": "longest run done",
     "event_limit": "limit of events reached",
     "interrupted": "interrupted",
 }
@@ -65,13 +77,20 @@ def print_result(result, console: Console) -> None:
     page = _Page(console)
     page.line(_headline(result), "bold")
     if not result.converged:
-        page.line(_not_converged(result), "bold")
-    page.table("", _main_rows(result))
+        page.line(f"Not converged: {unfinished(result)[0]}.", "bold")
+    page.table("", _main_rows(result, page))
     _print_breakdown(result, page)
     _print_probes(result, page)
+    _print_carriers(result, page)
     heat_shown = _print_heat(result, page)
     _print_comparison(result.limits, page)
+    if page.shifted:
+        page.line("")
+        page.line(
+            "off ≤: the noise of the frozen fields may have moved the value so far, besides ±"
+        )
     _print_missing(result, page)
+    _print_lattice_rise(result, page)
     if heat_shown or result.current_A is not None:
         page.line("")
         page.line(CAUTION, "italic")
@@ -105,6 +124,7 @@ class _Page:
         self.console = console
         self.narrow = console.width < _NARROW
         self.wide = console.width >= _WIDE
+        self.shifted = False  # whether a shift by noise was written
         self._plain = not _knows_greek(console.encoding)
 
     def text(self, text, style=""):
@@ -114,9 +134,16 @@ class _Page:
         self.console.print(self.text(text, style))
 
     def table(self, title, rows, columns=None, right=()):
-        """A table of texts; right: indices of the columns that end flush."""
+        """A table of texts; right: indices of the columns that end flush.
+
+        Columns without a name and without a text are left out.
+        """
         if not rows:
             return
+        names = columns or [""] * len(rows[0])
+        used = [i for i, name in enumerate(names) if name or any(row[i] for row in rows)]
+        rows = [[row[i] for i in used] for row in rows]
+        names, right = [names[i] for i in used], [used.index(i) for i in right if i in used]
         self.line("")
         if title:
             self.line(title, "bold")
@@ -127,7 +154,7 @@ class _Page:
             box=None, padding=(0, 2, 0, 0), show_header=bool(columns), header_style="dim",
             pad_edge=False,
         )  # fmt: skip
-        for index, name in enumerate(columns or [""] * len(rows[0])):
+        for index, name in enumerate(names):
             table.add_column(
                 self.text(name), justify="right" if index in right else "left",
                 no_wrap=index > 0, overflow="fold",
@@ -183,23 +210,32 @@ def _scaled(value, unit, error=None, digits=6):
     return format_scaled(value, error, unit, digits)
 
 
-def _estimate(estimate, unit="", factor=1.0):
+def _estimate(estimate, unit=""):
     """Value and error of an Estimate; an error that is missing reads n/a."""
     if estimate is None:
         return "n/a"
-    error = math.nan if estimate.error is None else estimate.error * factor
-    text = _scaled(estimate.value * factor, unit, error)
-    if estimate.systematic:
-        text += f", bias up to {_scaled(abs(estimate.systematic) * factor, unit, digits=2)}"
-    return text
+    error = math.nan if estimate.error is None else estimate.error
+    return _scaled(estimate.value, unit, error)
+
+
+def _shift(estimate, unit, page):
+    """How far noise may have moved an Estimate, such as 'off ≤ 30 Ω', if beside its error that
+    matters."""
+    size = abs(estimate.systematic or 0.0) if estimate is not None else 0.0
+    if size == 0.0 or size < _SMALL_SHIFT * (estimate.error or 0.0):
+        return ""
+    if size < ROUNDING * abs(estimate.value):
+        return ""
+    page.shifted = True
+    return f"off ≤ {_scaled(size, unit, digits=2)}"
 
 
 def _relative(estimate):
-    """The relative error, such as '0.31 %'; 'exact' where nothing random enters."""
+    """The relative error, such as '0.31 %'; nothing where the value says that it is exact."""
     if not estimate.value or estimate.error is None or not math.isfinite(estimate.error):
         return ""
     relative = estimate.error / abs(estimate.value)
-    return "exact" if relative < ROUNDING else _percent(relative)
+    return "" if relative < ROUNDING else _percent(relative)
 
 
 def _percent(share):
@@ -234,37 +270,108 @@ def _conditions(scenario):
     if not scenario.linear_response:
         bias = f"bias {format_number(scenario.contacts.bias_mV, 'mV')}"
     left, right = scenario.left_temperature_K, scenario.right_temperature_K
-    if left == right:
-        return f"{bias}, {format_number(left, 'K')}"
-    return f"{bias}, {format_number(left, 'K')} left and {format_number(right, 'K')} right"
+    contacts = format_number(left, "K")
+    if left != right:
+        contacts = f"{contacts} left and {format_number(right, 'K')} right"
+    return "; ".join([f"{bias}, {contacts}", *_relaxation(scenario)])
 
 
-def _not_converged(result):
-    if result.residual is None:
-        return "Not converged: the asked error was not reached."
-    residual = format_number(result.residual, digits=3)
-    return f"Not converged (residual {residual}): values may still move by more than their errors."
+def _relaxation(scenario):
+    """What changes energies in the channel, in words; nothing in an elastic one."""
+    mechanisms = [_mechanism(mechanism) for mechanism in scenario.relaxation.mechanisms]
+    words = [f"relaxation by {', '.join(mechanisms)}"] if mechanisms else []
+    coupled = sum(probe.coupling > 0.0 for probe in scenario.probes)
+    if coupled:
+        words.append(f"{coupled} coupled {'probe' if coupled == 1 else 'probes'}")
+    if words:
+        words.append(f"lattice {format_number(scenario.bath_temperature_K, 'K')}")
+    return words
 
 
-def _main_rows(result):
+def _mechanism(mechanism):
+    path = f"path {format_number(mechanism.path_nm, 'nm')}"
+    if mechanism.kind == "optical_phonon":
+        energy = format_number(mechanism.energy_meV, "meV")
+        return f"optical phonons of {energy} ({path})"
+    return f"{mechanism.kind} ({path}, direction {mechanism.direction or 'kept'})"
+
+
+def unfinished(result):
+    """Why a run has not converged, and what would help; two texts without a full stop."""
+    asked = result.scenario.simulation
+    reasons, keys = [], []
+    if result.relaxes and result.residual is None:
+        reasons.append("the run was too short to tell whether the fields are settled")
+    elif result.relaxes and (limit := _allowed_drift()) < result.residual:
+        what = result.drift or "a frozen field"
+        size = format_number(result.drift_sigma, digits=3)
+        reasons.append(
+            f"the fields still drift, most of all {what}: by {size} standard errors from one "
+            f"window of rounds to the next, where {format_number(limit)} are allowed"
+        )
+    for key, text in _missed(result, asked):
+        reasons.append(f"the asked error was not reached{text}")
+        keys.append(key)
+    if not reasons and (asked.target_relative_error or asked.heat_share_error):
+        reasons.append("the asked error was not reached")
+        keys.append("simulation.relative_error")
+    more = {
+        "max_seconds": "raise simulation.max_seconds",
+        "windows": "this is the longest run of so many batches: raise simulation.batches",
+        "event_limit": "one carrier takes more than 10^10 steps: paths are too short for the "
+        "length of the channel",
+    }
+    helps = [more.get(result.stopped_by, "raise simulation.histories"), *keys]
+    return "; ".join(reasons) or "stopped before its end", " or ".join(helps)
+
+
+def _allowed_drift():
+    from carriersim.engine import iterate  # compiled code, which only an unsettled run needs
+
+    return iterate.DRIFT_SIGMA
+
+
+def _missed(result, asked):
+    """(key, words) of each asked error that the result is known to miss."""
+    target = asked.target_relative_error
+    known = result.resistance_ohm or (result.current_A if result.relaxes else None)
+    known = known or result.conductance_S
+    reached = True
+    if target and known is not None and known.error is not None and known.value:
+        error = known.error / abs(known.value)
+        reached = error <= target
+        if not reached:
+            yield (
+                "simulation.relative_error",
+                f": {_percent(error)} of R, asked {_percent(target)}",
+            )
+    settled = result.residual is not None and result.residual <= _allowed_drift()
+    if asked.heat_share_error and reached and settled:  # what else is left
+        share = format_number(asked.heat_share_error)
+        yield "simulation.heat_share_error", f": {share} of the lattice's share of I V"
+
+
+def _main_rows(result, page):
     rows = []
 
     def add(name, estimate, unit="", text=None):
         if estimate is not None:
-            rows.append([name, text or _estimate(estimate, unit), _relative(estimate)])
+            text = text or _estimate(estimate, unit)
+            rows.append([name, text, _relative(estimate), _shift(estimate, unit, page)])
 
     resistance = result.resistance_ohm
     add("current", result.current_A, "A")
     if resistance is not None:
         error = math.nan if resistance.error is None else resistance.error
         kilo = format_estimate(resistance.value * 1e-3, error * 1e-3, "kΩ")
-        add("resistance", resistance, text=kilo)
-        rows.append(["", format_estimate(resistance.value, error, "Ω"), ""])
+        add("resistance", resistance, "Ω", kilo)
+        rows.append(["", format_estimate(resistance.value, error, "Ω"), "", ""])
     if _differs(result.differential_resistance_ohm, resistance):
         add("differential resistance", result.differential_resistance_ohm, "Ω")
     add("conductance dI/dV", result.conductance_S, "S")
     add("transmission", result.transmission)
-    rows.append(["ballistic resistance", _scaled(result.ballistic_resistance_ohm, "Ω"), "exact"])
+    ballistic = format_scaled(result.ballistic_resistance_ohm, 0.0, "Ω")
+    rows.append(["ballistic resistance", ballistic, "", ""])
     return rows
 
 
@@ -289,13 +396,13 @@ def _print_breakdown(result, page):
         name = part.mechanism if part.kind == "piece" and part.mechanism else part.name
         if page.narrow:
             name, place = f"{name}, {place}" if place else name, ""
-        text = _estimate(part.resistance_ohm, "Ω")
-        rows.append([name, place, text, format_share(value, total)])
+        text, shift = _estimate(part.resistance_ohm, "Ω"), _shift(part.resistance_ohm, "Ω", page)
+        rows.append([name, place, text, format_share(value, total), shift])
     if rest:
         value = sum(part.resistance_ohm.value for part in rest)
         name = f"the other {len(rest)} parts"
-        rows.append([name, "", _scaled(value, "Ω", digits=4), format_share(value, total)])
-    columns = ["part", "place", "resistance", "share"]
+        rows.append([name, "", _scaled(value, "Ω", digits=4), format_share(value, total), ""])
+    columns = ["part", "place", "resistance", "share", ""]
     page.table("Where the resistance sits", rows, columns, right=(1, 3))
 
 
@@ -304,21 +411,24 @@ def _print_probes(result, page):
         return
     factor, unit = length_scale(result.scenario.channel.length_nm)
     potential_unit = "of the bias" if result.linear_response else "mV"
-    rows = []
-    for probe in result.probes[:_MOST_PAIRS]:
+    scenario, rows = result.scenario, []
+    for i, probe in enumerate(result.probes[:_MOST_PAIRS]):
         place = format_number(probe.position_nm * factor, unit, 5)
-        if probe.potential is None:
-            rows.append([place, "n/a"])
-            continue
-        error = math.nan if probe.potential.error is None else probe.potential.error
-        rows.append([place, format_estimate(probe.potential.value, error, potential_unit)])
-    page.table("Voltage probes", rows, ["place", "potential"])
+        coupling = scenario.probes[i].coupling
+        coupled = f"takes {format_share(coupling, 1.0)}" if coupling > 0.0 else ""
+        text = "n/a"
+        if probe.potential is not None:
+            error = math.nan if probe.potential.error is None else probe.potential.error
+            text = format_estimate(probe.potential.value, error, potential_unit)
+        rows.append([f"probe {i + 1}", place, text, coupled])
+    page.table("Voltage probes", rows, ["probe", "place", "potential", ""])
     _print_left_out(len(result.probes) - _MOST_PAIRS, page)
     rows = []
     for pair in (result.four_point or ())[:_MOST_PAIRS]:
         ends = [format_number(x * factor, digits=5) for x in (pair.from_nm, pair.to_nm)]
-        rows.append([f"{ends[0]} – {ends[1]} {unit}", _estimate(pair.resistance_ohm, "Ω")])
-    page.table("Four-point resistance", rows, ["between", "resistance"])
+        text, shift = _estimate(pair.resistance_ohm, "Ω"), _shift(pair.resistance_ohm, "Ω", page)
+        rows.append([f"{ends[0]} – {ends[1]} {unit}", text, shift])
+    page.table("Four-point resistance", rows, ["between", "resistance", ""])
     _print_left_out(len(result.four_point or ()) - _MOST_PAIRS, page)
 
 
@@ -327,21 +437,81 @@ def _print_left_out(count, page):
         page.line(f"and {count} more in summary.json")
 
 
+def _print_carriers(result, page):
+    """The largest departure from local equilibrium and the hottest carriers, and where."""
+    if result.linear_response:
+        return  # departures from equilibrium are infinitely small
+    rows = []
+    for name, key, unit in (
+        ("largest departure from local equilibrium", "departure", ""),
+        ("highest carrier temperature", "carrier_temperature_K", "K"),
+    ):
+        found = _greatest(result, key)
+        if found is not None:
+            value, error, place = found
+            rows.append([name, format_estimate(value, error, unit), place])
+    page.table("Carriers inside", rows, ["", "", "at"])
+
+
+def _greatest(result, key):
+    """Value, error and place of the surest maximum of a profile; None if it is nowhere above 0.
+
+    The one whose value less its error is greatest, or noise would choose.
+    """
+    values = getattr(result, key)
+    errors = result.errors.get(key, np.full(values.shape, math.nan))
+    sure = np.where(np.isfinite(errors), values - errors, values)
+    if not np.isfinite(sure).any() or not np.nanmax(values) > 0.0:
+        return None
+    cell = int(np.nanargmax(sure))
+    factor, unit = length_scale(result.scenario.channel.length_nm)
+    place = format_number(result.x_nm[cell] * factor, unit, 4)
+    return float(values[cell]), float(errors[cell]), place
+
+
+def _print_lattice_rise(result, page):
+    """How much warmer the lattice would get, if its contact to the substrate is known."""
+    conductance = result.scenario.relaxation.substrate_conductance_W_per_K_m
+    if conductance is None or not result.relaxes or result.heat_W is None:
+        return
+    greatest = _greatest(result, "lattice_power_W_per_nm")
+    if greatest is None:
+        return  # no mechanism gives power to the lattice
+    per_metre = 1e9 / result.scenario.channel.length_nm / conductance
+    lattice = result.heat_W.lattice
+    error = math.nan if lattice.error is None else lattice.error
+    mean = format_estimate(lattice.value * per_metre, error * per_metre, "K")
+    value, error, place = greatest
+    most = format_estimate(value * 1e9 / conductance, error * 1e9 / conductance, "K")
+    page.line("")
+    page.line(
+        f"With {format_number(conductance)} W/(K m) to the substrate this power would warm the "
+        f"lattice by {mean} on the mean of the channel and by {most} at most, near {place}. T_b "
+        "itself stays fixed in the model; how warm a device gets is for measurement to tell."
+    )
+
+
 def _print_heat(result, page):
     """Print where the heat lands and the thermal numbers; return whether there was any."""
     rows = []
     heat = result.heat_W
     if heat is not None:
-        rows += [
-            ["heat in the left contact", _estimate(heat.left_contact, "W")],
-            ["heat in the right contact", _estimate(heat.right_contact, "W")],
+        places = [
+            ("heat in the left contact", heat.left_contact),
+            ("heat in the right contact", heat.right_contact),
         ]
         inner = [("heat in the lattice", heat.lattice)]
         inner += [(f"heat in probe {i + 1}", probe) for i, probe in enumerate(heat.probes)]
+        places += [(n, power) for n, power in inner if power is not None and any(_size(power))]
+        total = sum(power.value for _, power in places)
         rows += [
-            [name, _estimate(power, "W")]
-            for name, power in inner
-            if power is not None and (power.value or power.error)
+            [
+                name,
+                _estimate(power, "W"),
+                format_share(power.value, total),
+                _shift(power, "W", page),
+            ]
+            for name, power in places
         ]
     thermal, scenario = result.thermal, result.scenario
     entries = [
@@ -354,9 +524,18 @@ def _print_heat(result, page):
             ("heat current out of the left contact", thermal.heat_current_left_W, "W"),
             ("heat current into the right contact", thermal.heat_current_right_W, "W"),
         ]
-    rows += [[name, _estimate(value, unit)] for name, value, unit in entries if value is not None]
-    page.table("Heat", rows)
+    rows += [
+        [name, _estimate(value, unit), "", _shift(value, unit, page)]
+        for name, value, unit in entries
+        if value is not None
+    ]
+    columns = ["", "", "share of I V" if heat is not None else "", ""]
+    page.table("Heat", rows, columns, right=(2,))
     return bool(rows)
+
+
+def _size(estimate):
+    return estimate.value, estimate.error
 
 
 def _print_comparison(limits, page):

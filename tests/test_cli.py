@@ -32,6 +32,17 @@ scattering:
 probes: [{position_nm: 20}, {position_nm: 70}]
 simulation: {cells: 10, relative_error: 0.02}
 """
+RELAXING = """\
+name: Relaxing
+channel: {length_nm: 100}
+contacts: {bias_mV: 20, temperature_K: 77}
+scattering: {points: [{position_nm: 40, transmission: 0.5}]}
+relaxation:
+  substrate_conductance_W_per_K_m: 0.1
+  mechanisms: [{kind: bath, path_nm: 50, direction: kept}]
+probes: [{position_nm: 70, coupling: 0.2}]
+simulation: {cells: 10, energy_bins: 40, batches: 16, histories: 16}
+"""
 ENDLESS = QUICK.replace("relative_error: 0.02", "relative_error: 1e-7")
 STATUS = {"done": 0, "our fault": 1, "bad input": 2, "not reached": 3, "interrupted": 130}
 
@@ -42,6 +53,15 @@ def here(tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
     (tmp_path / "quick.yaml").write_text(QUICK)
     return tmp_path
+
+
+@pytest.fixture
+def relaxing(tmp_path, monkeypatch):
+    """A working directory with a scenario that relaxes in it; returns a function that runs it."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "relaxing.yaml").write_text(RELAXING)
+    arguments = ["run", "relaxing.yaml", "--no-figures", "--out", "place"]
+    return lambda *changes: main([*arguments, *(f"--set={change}" for change in changes)])
 
 
 def run(*arguments):
@@ -130,9 +150,121 @@ def test_error_not_reached(here, capsys, limit):
     assert run("--out", "place", *options) == STATUS["not reached"]
     out, err = capsys.readouterr()
     name = limit.partition("=")[0]
-    assert f"the asked error was not reached (stopped by {name})" in err
+    assert re.search(
+        r"not converged: the asked error was not reached: [\d.]+ % of R, asked 1e-04 % "
+        rf"\(stopped by {name}\); raise simulation\.{name} or simulation\.relative_error\n$",
+        err,
+    ), err
     assert "place" in out and names("place") == FILES
     assert summary("place")["converged"] is False and summary("place")["stopped_by"] == name
+
+
+# --- relaxing runs --------------------------------------------------------------------------------
+
+
+def test_relaxing_run(relaxing, capsys):
+    assert relaxing() == STATUS["done"]
+    out, err = capsys.readouterr()
+    assert err == "" and names("place") == FILES
+    text = " ".join(out.split())
+    assert "bath (path 50 nm, direction kept); 1 coupled probe; lattice 77 K" in text
+    assert "With 0.1 W/(K m) to the substrate" in text and "T_b itself stays fixed" in text
+    data = summary("place")
+    assert data["converged"] is True and data["stopped_by"] == "histories"
+    heat = data["heat_W"]
+    powers = [heat["left_contact"], heat["right_contact"], heat["lattice"], *heat["probes"]]
+    power = sum(power["value"] for power in powers)
+    assert power == pytest.approx(20e-3 * data["current_A"]["value"], rel=1e-6)
+
+
+def test_drifting_fields(relaxing, capsys, monkeypatch):
+    """Some drift there always is; with a threshold close to 0 no run has settled."""
+    from carriersim.engine import iterate
+
+    monkeypatch.setattr(iterate, "DRIFT_SIGMA", 0.01)
+    assert relaxing() == STATUS["not reached"]
+    out, err = capsys.readouterr()
+    data = summary("place")
+    assert names("place") == FILES and "results: place" in out
+    assert data["converged"] is False and data["residual"] > 0.01
+    result = cs.open_result("place")
+    assert result.drift in err and f"by {result.drift_sigma:.2f}"[:-1] in err
+    assert re.search(
+        r"^carriersim: not converged: the fields still drift, most of all .+: by [\d.]+ standard "
+        r"errors from one window of rounds to the next, where 0\.01 are allowed \(stopped by "
+        r"histories\); raise simulation\.histories\n$",
+        err,
+    ), err
+    assert "asked error" not in err
+    assert "Not converged: the fields still drift" in " ".join(out.split())
+
+
+def test_drift_and_error_not_reached(relaxing, capsys, monkeypatch):
+    from carriersim.engine import iterate
+
+    monkeypatch.setattr(iterate, "DRIFT_SIGMA", 0.01)
+    assert relaxing("simulation.relative_error=1e-7") == STATUS["not reached"]
+    err = capsys.readouterr().err
+    assert "the fields still drift" in err and "asked 1e-05 %" in err
+    assert err.endswith("raise simulation.histories or simulation.relative_error\n")
+
+
+@pytest.mark.parametrize("limit", ["histories=16", "max_seconds=0.01"])
+def test_settled_run_whose_error_is_not_reached(relaxing, capsys, limit):
+    changes = ["simulation.histories=", f"simulation.{limit}", "simulation.relative_error=1e-7"]
+    assert relaxing(*changes) == STATUS["not reached"]
+    err = capsys.readouterr().err
+    name = limit.partition("=")[0]
+    assert "asked error was not reached" in err and "drift" not in err
+    assert err.endswith(f"raise simulation.{name} or simulation.relative_error\n")
+    assert summary("place")["converged"] is False
+
+
+def test_error_of_the_heat_share(relaxing, capsys, monkeypatch):
+    from carriersim.engine import iterate
+
+    shares = []
+
+    def watched(*args):
+        shares.append(heat_share(*args))
+        return shares[-1]
+
+    heat_share = iterate.heat_share
+    monkeypatch.setattr(iterate, "heat_share", watched)
+    asked = 0.0005
+    changes = ["simulation.histories=", f"simulation.heat_share_error={asked}"]
+    assert relaxing(*changes) == STATUS["done"]
+    out, err = capsys.readouterr()
+    assert err == "" and "asked error of the heat share reached" in " ".join(out.split())
+    data = summary("place")
+    assert data["stopped_by"] == "heat_share_error" and data["converged"] is True
+    assert shares[-1].error <= asked < shares[0].error  # it had to go on for it
+    result = cs.open_result("place")
+    power = 20e-3 * result.current_A.value
+    assert 0.05 < shares[-1].value < 0.95
+    assert shares[-1].value == pytest.approx(result.heat_W.lattice.value / power, rel=1e-9)
+    assert result.scenario.simulation.heat_share_error == asked
+
+
+def test_error_of_the_heat_share_not_reached(relaxing, capsys):
+    assert relaxing("simulation.heat_share_error=1e-6") == STATUS["not reached"]
+    err = capsys.readouterr().err
+    assert "the asked error was not reached: 1e-06 of the lattice's share of I V" in err
+    assert err.endswith("raise simulation.histories or simulation.heat_share_error\n")
+
+
+def test_without_a_result(here, capsys, monkeypatch):
+    """A run that gave itself up before it had anything to write."""
+    from carriersim.engine.solve import NothingDone
+
+    def nothing(*args):
+        raise NothingDone("stopped before two windows were complete (event_limit)")
+
+    monkeypatch.setattr(runner, "simulate", nothing)
+    assert run("--out", "place") == STATUS["not reached"]
+    err = capsys.readouterr().err
+    assert "(event_limit), nothing was written" in err
+    assert names(here) == {"quick.yaml"}
 
 
 # --- bad input ------------------------------------------------------------------------------------
@@ -152,6 +284,11 @@ BAD_FILES = {
     "not this version": (
         QUICK.replace("length_nm: 100", "length_nm: 100\n  dimension: 3"),
         "this version computes d = 1 only",
+    ),
+    "too large for memory": (
+        RELAXING.replace("cells: 10,", "cells: 100000,"),
+        r"bad.yaml, line 9: simulation.cells: simulation.cells \(10000\d with cuts at scatterers "
+        r"and probes\) times simulation.energy_bins \(\d+\) need up to \S+ GB",
     ),
 }
 
@@ -525,7 +662,7 @@ def test_interrupted_before_the_first_round(here, capsys, monkeypatch):
     from carriersim.engine.solve import NothingDone
 
     def nothing(*args):
-        raise NothingDone("stopped before the first round was complete")
+        raise NothingDone("stopped before the first round was complete (interrupted)")
 
     monkeypatch.setattr(runner, "simulate", nothing)
     assert run("--out", "place") == STATUS["interrupted"]

@@ -3,7 +3,9 @@
 import dataclasses
 import io
 import math
+import re
 
+import numpy as np
 import pytest
 from rich.console import Console
 
@@ -19,7 +21,7 @@ from carriersim.formatting import (
 )
 from carriersim.report import format_estimate, print_limits, print_result
 from carriersim.result import Estimate, LimitRow, Part
-from tests.fake_results import fake_result, limit_row
+from tests.fake_results import fake_result, limit_row, relaxing_result
 
 
 def printed(result, width=80, encoding="utf-8"):
@@ -41,7 +43,7 @@ def printed(result, width=80, encoding="utf-8"):
         (0.0, 0.1, "0.00 ± 0.10 kΩ"),
         (-0.0001, 0.2, "0.00 ± 0.20 kΩ"),
         (1.0, 50.0, "1 ± 50 kΩ"),
-        (5.0, 0.0, "5 ± 0 kΩ"),
+        (5.0, 0.0, "5 kΩ exact"),
         (1.0, 1e-18, "1.000000000 ± 1.0e-18 kΩ"),
         (3e8, 1e5, "(3.0000 ± 0.0010)e+08 kΩ"),
         (1.5e-12, 2e-15, "(1.5000 ± 0.0020)e-12 kΩ"),
@@ -67,9 +69,9 @@ def test_an_estimate_without_unit():
         (12906.4, 21.0, "Ω", "12.906 ± 0.021 kΩ"),
         (1.5e-6, 1e-9, "A", "1.5000 ± 0.0010 µA"),
         (3.2e7, None, "Ω", "32 MΩ"),
-        (0.0, 0.0, "W", "0 ± 0 W"),
+        (0.0, 0.0, "W", "0 W exact"),
         (0.0, 2e-9, "W", "0.0 ± 2.0 nW"),
-        (6453.2, 1e-11, "Ω", "6.4532 ± 0 kΩ"),
+        (6453.2, 1e-11, "Ω", "6.4532 kΩ exact"),
         (999.9999, 0.5, "Ω", "1.00000 ± 0.00050 kΩ"),
     ],
 )
@@ -96,6 +98,7 @@ def test_other_texts():
 
 def test_the_main_numbers_are_there():
     text = printed(fake_result(seed=3))
+    assert "ballistic resistance  12.9064 kΩ exact" in text
     assert text.startswith("one defect: bias 20 mV, 300 K; 1.28 million histories in 0.42 s;")
     for word in ("current", "resistance", "conductance", "transmission", " nA", " kΩ", " Ω"):
         assert word in text
@@ -187,7 +190,210 @@ def test_unfinished_runs_say_so():
     text = printed(result, 100)
     assert "time limit reached" in text
     assert "Not converged: the asked error was not reached." in text
-    assert "residual 0.02" in printed(dataclasses.replace(result, residual=0.02))
+
+
+DRIFTING = {"converged": False, "drift": "mu+ near 40 nm (largest of 41)"}
+
+
+def test_an_unfinished_relaxing_run_says_what_drifts():
+    result = relaxing_result(
+        {"simulation.histories": 100}, residual=7.25, drift_sigma=7.25, stopped_by="histories",
+        **DRIFTING,
+    )  # fmt: skip
+    reason, remedy = report.unfinished(result)
+    assert reason == (
+        "the fields still drift, most of all mu+ near 40 nm (largest of 41): by 7.25 standard "
+        "errors from one window of rounds to the next, where 3.5 are allowed"
+    )
+    assert remedy == "raise simulation.histories"
+    text = " ".join(printed(result).split())
+    assert f"Not converged: {reason}." in text
+
+
+@pytest.mark.parametrize(
+    ("changes", "stopped_by", "reason", "remedy"),
+    [
+        (
+            {"simulation.relative_error": 1e-3},
+            "histories",
+            "the asked error was not reached: 0.3 % of R, asked 0.1 %",
+            "raise simulation.histories or simulation.relative_error",
+        ),
+        (
+            {"simulation.relative_error": 0.01, "simulation.heat_share_error": 1e-3},
+            "max_seconds",
+            "the asked error was not reached: 0.001 of the lattice's share of I V",
+            "raise simulation.max_seconds or simulation.heat_share_error",
+        ),
+        (
+            {"simulation.heat_share_error": 1e-3},
+            "windows",
+            "the asked error was not reached: 0.001 of the lattice's share of I V",
+            "this is the longest run of so many batches: raise simulation.batches or "
+            "simulation.heat_share_error",
+        ),
+    ],
+)
+def test_a_settled_run_says_which_error_is_missing(changes, stopped_by, reason, remedy):
+    result = relaxing_result(
+        changes, residual=2.0, drift_sigma=2.0, stopped_by=stopped_by, **DRIFTING
+    )
+    assert report.unfinished(result) == (reason, remedy)
+
+
+def test_drift_and_error_are_both_told():
+    result = relaxing_result(
+        {"simulation.relative_error": 1e-3}, residual=4.0, drift_sigma=4.0, stopped_by="windows",
+        **DRIFTING,
+    )  # fmt: skip
+    reason = report.unfinished(result)[0]
+    assert "still drift" in reason and "asked 0.1 %" in reason
+    early = dataclasses.replace(result, residual=None, drift=None, drift_sigma=None)
+    assert "too short to tell whether the fields are settled" in report.unfinished(early)[0]
+
+
+# Relaxing runs.
+
+PROBES = {"probes": [{"position_nm": 20, "coupling": 1.0}, {"position_nm": 70}]}
+
+
+def block(text, title):
+    return text.partition(f"\n{title}\n")[2].partition("\n\n")[0]
+
+
+def test_conditions_of_a_relaxing_run():
+    changes = PROBES | {
+        "relaxation.bath_temperature_K": 70,
+        "relaxation.mechanisms[1]": {"kind": "optical_phonon", "path_nm": 30, "energy_meV": 36},
+    }
+    changes["relaxation.mechanisms"] = [
+        {"kind": "bath", "path_nm": 20, "direction": "randomised"},
+        {"kind": "carriers", "path_nm": 5},
+        changes.pop("relaxation.mechanisms[1]"),
+    ]
+    scenario = relaxing_result().scenario.replace(changes)
+    assert report._conditions(scenario) == (
+        "bias 100 mV, 77 K; relaxation by bath (path 20 nm, direction randomised), carriers "
+        "(path 5 nm, direction kept), optical phonons of 36 meV (path 30 nm); 1 coupled probe; "
+        "lattice 70 K"
+    )
+    probes = scenario.replace({"relaxation.mechanisms": []})
+    assert report._conditions(probes) == "bias 100 mV, 77 K; 1 coupled probe; lattice 70 K"
+    elastic = probes.replace({"probes": []})
+    assert report._conditions(elastic) == "bias 100 mV, 77 K"
+
+
+def test_probes_are_named_the_same_everywhere():
+    text = printed(relaxing_result(PROBES), 100)
+    rows = block(text, "Where the resistance sits").splitlines()
+    assert any(row.split()[:4] == ["probe", "1", "20", "nm"] for row in rows)
+    rows = block(text, "Voltage probes").splitlines()[1:]
+    assert [row.split()[:4] for row in rows] == [
+        ["probe", "1", "20", "nm"],
+        ["probe", "2", "70", "nm"],
+    ]
+    assert "takes" not in rows[1] and rows[0].rstrip().endswith("takes 100.0 %")
+    assert "heat in probe 1" in text and "heat in probe 2" not in text
+
+
+def test_heat_shares_add_up():
+    result = relaxing_result(PROBES)
+    rows = block(printed(result, 100), "Heat").splitlines()
+    assert rows[0].split() == ["share", "of", "I", "V"]
+    shares = [float(row.partition(" %")[0].split()[-1]) for row in rows if " %" in row]
+    assert len(shares) == 4 and sum(shares) == pytest.approx(100, abs=0.21)
+    heat = result.heat_W
+    power = result.scenario.contacts.bias_mV * 1e-3 * result.current_A.value
+    (row,) = [row for row in rows if row.startswith("heat in the lattice")]
+    assert f"{100 * heat.lattice.value / power:.1f} %" in row
+
+
+@pytest.mark.parametrize(("share", "shown"), [(0.0, False), (0.09, False), (0.11, True)])
+def test_a_shift_by_noise_is_shown_where_it_counts(share, shown):
+    result = relaxing_result()
+    known = result.current_A
+    current = dataclasses.replace(known, systematic=share * known.error)
+    text = printed(dataclasses.replace(result, current_A=current), 100)
+    assert ("off ≤ " in text) == shown
+    assert ("off ≤: the noise of the frozen fields" in text) == shown
+
+
+def test_carriers_inside():
+    result = relaxing_result()
+    rows = block(printed(result, 100), "Carriers inside").splitlines()
+    assert len(rows) == 3
+    for row, values in zip(rows[1:], (result.departure, result.carrier_temperature_K), strict=True):
+        cell = int(values.argmax())
+        assert f"{result.x_nm[cell]:.4g} nm" in row
+        assert float(row.split(" ± ")[0].split()[-1]) == pytest.approx(values[cell], rel=1e-2)
+    assert "largest departure" in rows[1] and " K " in rows[2]
+    linear = relaxing_result({"contacts.bias_mV": 0})
+    assert "Carriers inside" not in printed(linear)
+
+
+def test_noise_does_not_choose_the_hottest_cell():
+    result = relaxing_result()
+    kelvin, errors = result.carrier_temperature_K.copy(), dict(result.errors)
+    spread = errors["carrier_temperature_K"].copy()
+    kelvin[3], spread[3] = 2 * kelvin.max(), 3 * kelvin.max()
+    errors["carrier_temperature_K"] = spread
+    noisy = dataclasses.replace(result, carrier_temperature_K=kelvin, errors=errors)
+    assert report._greatest(noisy, "carrier_temperature_K") == (
+        report._greatest(result, "carrier_temperature_K")
+    )
+
+
+def test_rise_of_the_lattice():
+    """P' / G' by hand: mean and greatest power per metre over 0.2 W/(K m)."""
+    conductance = {"relaxation.substrate_conductance_W_per_K_m": 0.2}
+    result = relaxing_result(conductance)
+    text = " ".join(printed(result).split())
+    found = re.search(
+        r"With 0\.2 W/\(K m\) to the substrate this power would warm the lattice by ([\d.]+) ± "
+        r"[\d.]+ K on the mean of the channel and by ([\d.]+) ± [\d.]+ K at most, near ([\d.]+) nm",
+        text,
+    )
+    mean, most, place = map(float, found.groups())
+    widths = np.diff(result.cell_edges_nm)
+    power = result.lattice_power_W_per_nm
+    assert mean == pytest.approx(result.heat_W.lattice.value / 100e-9 / 0.2, rel=1e-2)
+    assert mean == pytest.approx((power @ widths) / 100 * 1e9 / 0.2, rel=0.05)
+    assert most == pytest.approx(power.max() * 1e9 / 0.2, rel=1e-2)
+    assert place == pytest.approx(result.x_nm[power.argmax()], rel=1e-3)
+    assert "T_b itself stays fixed in the model" in text
+    assert text.index("T_b itself") < text.index("not a design rating")
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {},
+        {"relaxation.substrate_conductance_W_per_K_m": 0.2, "contacts.bias_mV": 0},
+        {"relaxation.substrate_conductance_W_per_K_m": 0.2, "relaxation.mechanisms": [
+            {"kind": "carriers", "path_nm": 20}
+        ]},
+    ],
+    ids=["not asked", "no bias", "no lattice"],
+)  # fmt: skip
+def test_no_rise_of_the_lattice(changes):
+    assert "substrate" not in printed(relaxing_result(changes))
+
+
+def test_no_rise_of_the_lattice_without_relaxation():
+    changes = {"relaxation.substrate_conductance_W_per_K_m": 0.2}
+    assert "substrate" not in printed(fake_result(changes=changes))
+
+
+@pytest.mark.parametrize("width", [40, 60, 80, 140])
+@pytest.mark.parametrize("encoding", ["utf-8", "ascii"])
+def test_relaxing_runs_fit_any_width(width, encoding):
+    changes = PROBES | {"relaxation.substrate_conductance_W_per_K_m": 0.2}
+    result = relaxing_result(changes)
+    current = dataclasses.replace(result.current_A, systematic=result.current_A.error)
+    text = printed(dataclasses.replace(result, current_A=current), width, encoding)
+    assert max(map(len, text.splitlines())) <= width
+    assert text.isascii() == (encoding == "ascii")
+    assert "off <= " in text or "off ≤ " in text
 
 
 def test_differential_resistance_only_if_it_differs():
@@ -207,7 +413,8 @@ def test_missing_errors_and_values():
     text = printed(result)
     assert "20 ± n/a kΩ" in text
     assert "20000 ± n/a Ω" in text
-    assert "bias up to 100 nS" in text
+    assert "0 S exact" in text
+    assert "off ≤ 100 nS" in text
 
 
 @pytest.mark.parametrize(
@@ -238,8 +445,6 @@ def test_far_from_an_exact_form_is_marked():
 
 
 def test_a_long_list_of_limits_is_cut():
-    import numpy as np
-
     rng = np.random.default_rng(0)
     rows = tuple(limit_row(f"row {i}", "transmission", 0.2, 0.01, rng) for i in range(60))
     assert "and 20 more in summary.json" in printed(fake_result(limits=rows))

@@ -144,10 +144,12 @@ def test_frozen_and_hashable():
         ("histories: 1000", None),
         ("max_seconds: 1", None),
         ("max_seconds: 1, relative_error: 0.02", 0.02),
+        ("heat_share_error: 0.1", None),
     ],
 )
 def test_target_relative_error(inside, target):
-    assert read_text(part("simulation", inside)).simulation.target_relative_error == target
+    scenario = read_text(relaxing(BATH, simulation=f"{{{inside}}}"))
+    assert scenario.simulation.target_relative_error == target
 
 
 NUMBER = "a number > 0"
@@ -162,6 +164,15 @@ def points(inside: str) -> str:
 
 def table(energies: str, values: str) -> str:
     return points(f"{{position_nm: 9, transmission: {{energy_meV: {energies}, value: {values}}}}}")
+
+
+COLD = "{bias_mV: 1, temperature_K: 4}"
+BATH = "{kind: bath, path_nm: 1, direction: kept}"
+MANY_PROBES = "[" + ", ".join(f"{{position_nm: {0.25 * i}}}" for i in range(1, 501)) + "]"
+
+
+def relaxing(mechanisms: str, **parts: str) -> str:
+    return with_parts(relaxation=f"{{mechanisms: [{mechanisms}]}}", **parts)
 
 
 FAULTS = {
@@ -612,7 +623,116 @@ FAULTS = {
         part("relaxation", "mechanisms: [{kind: carriers, path_nm: 1, energy_meV: 3}]"),
         "energy_meV: found 3; carriers has no energy of its own; allowed: for optical_phonon only",
     ),
+    **{
+        f"mechanism path {value}": (
+            relaxing(f"{{kind: carriers, path_nm: {value}}}"),
+            f"s.yaml, line 3: relaxation.mechanisms[0].path_nm: found {words}; allowed: {NUMBER}",
+        )
+        for value, words in {
+            "0": "0",
+            "-5": "-5",
+            ".nan": ".nan, not a finite number",
+            ".inf": ".inf, not a finite number",
+        }.items()
+    },
+    "phonon energy zero": (
+        relaxing("{kind: optical_phonon, path_nm: 1, energy_meV: 0}"),
+        f"relaxation.mechanisms[0].energy_meV: found 0; allowed: {NUMBER}",
+    ),
+    "phonon energy below zero": (
+        relaxing("{kind: optical_phonon, path_nm: 1, energy_meV: -3}"),
+        f"relaxation.mechanisms[0].energy_meV: found -3; allowed: {NUMBER}",
+    ),
+    "coupled probe outside": (
+        with_parts(probes="[{position_nm: 200, coupling: 1}]"),
+        "probes[0].position_nm: found 200; outside the channel; allowed: between 0 and 200.0 nm",
+    ),
+    "coupled probe at a contact": (
+        with_parts(probes="[{position_nm: 0, coupling: 1}]"),
+        "probes[0].position_nm: found 0; allowed: a number between 0 and channel.length_nm",
+    ),
+    "coupled probe at a scatterer": (
+        with_parts(
+            scattering=f"{{points: [{{{POINT}}}]}}", probes="[{position_nm: 100, coupling: 1}]"
+        ),
+        "probes[0].position_nm: found 100; the scatterer scattering.points[0] is at this place",
+    ),
+    "coupled probe at a coupled probe": (
+        with_parts(probes="[{position_nm: 9, coupling: 0.1}, {position_nm: 9, coupling: 0.1}]"),
+        "probes[1].position_nm: found 9; the probe probes[0] is at this place, and one of them is "
+        "coupled; allowed: a place of its own",
+    ),
+    **{
+        f"path called {name}": (
+            relaxing(
+                "{kind: carriers, path_nm: 1}",
+                scattering=f"{{mean_free_path_nm: [{{name: {name}, mean_free_path_nm: 1}}]}}",
+            ),
+            f"scattering.mean_free_path_nm[0].name: found '{name}' (text); with "
+            "relaxation.mechanisms this is the name of a part of the resistance; allowed: another",
+        )
+        for name in ("bath", "carriers", "optical phonon", "optical phonons")
+    },
+    "path of a section called bath": (
+        relaxing(
+            "{kind: carriers, path_nm: 1}",
+            scattering="{sections: [{from_nm: 0, to_nm: 9, backscatter_path_nm: "
+            "[{name: a, mean_free_path_nm: 1}, {name: bath, mean_free_path_nm: 1}]}]}",
+        ),
+        "scattering.sections[0].backscatter_path_nm[1].name: found 'bath' (text); with relaxation",
+    ),
     # Simulation.
+    "heat share without relaxation": (
+        part("simulation", "heat_share_error: 0.1"),
+        "simulation.heat_share_error: found 0.1; no mechanism gives heat to the lattice; allowed: "
+        "with a bath or an optical_phonon in relaxation.mechanisms",
+    ),
+    "heat share with carriers only": (
+        relaxing("{kind: carriers, path_nm: 1}", simulation="{heat_share_error: 0.1}"),
+        "simulation.heat_share_error: found 0.1; no mechanism gives heat to the lattice",
+    ),
+    "heat share without a bias": (
+        relaxing(BATH, simulation="{heat_share_error: 0.1}", contacts=COLD.replace("1,", "0,")),
+        "heat_share_error: found 0.1; without a bias there is no heat; allowed: with a bias other",
+    ),
+    "heat share error": (
+        relaxing(BATH, simulation="{heat_share_error: 0}"),
+        f"simulation.heat_share_error: found 0; allowed: {NUMBER}",
+    ),
+    "memory for cells": (
+        relaxing(BATH, simulation="{\n  cells: 100000, energy_bins: 50}"),
+        "s.yaml, line 5: simulation.cells: simulation.cells (100000 with cuts at scatterers and "
+        "probes) times simulation.energy_bins (46) need up to 24.4 GB of memory with relaxation "
+        "and 64 batches; allowed: at most 16423 cells with so many bins (4 GB)",
+    ),
+    "memory for bins": (
+        relaxing(BATH, simulation="{energy_bins: 5000}", probes=MANY_PROBES),
+        "simulation.energy_bins: simulation.cells (701 with cuts at scatterers and probes) times "
+        "simulation.energy_bins (4996) need up to 8.89 GB of memory with relaxation and 64 "
+        "batches; allowed: at most 315 cells with so many bins or 2220 bins with so many cells",
+    ),
+    "memory for automatic bins": (
+        with_parts(probes="[{position_nm: 1, coupling: 1}]", simulation="{cells: 20000}"),
+        "simulation.cells: simulation.cells (20002 with cuts at scatterers and probes) times "
+        "simulation.energy_bins (103, automatic) need up to ",
+    ),
+    "memory for batches": (
+        relaxing(BATH, simulation="{batches: 4096, cells: 1000, energy_bins: 400}"),
+        "and 4096 batches; allowed: at most 179 cells with so many bins (4 GB)",
+    ),
+    "memory for a small phonon": (
+        relaxing("{kind: optical_phonon, path_nm: 1, energy_meV: 1e-4}"),
+        "relaxation.mechanisms[0].energy_meV: found 0.0001; no bin may be wider, and "
+        "simulation.cells (200 with cuts at scatterers and probes) times simulation.energy_bins (",
+    ),
+    "no number of bins": (
+        relaxing("{kind: optical_phonon, path_nm: 1, energy_meV: 1e-300}"),
+        "relaxation.mechanisms[0].energy_meV: no number of bins covers the energies of this",
+    ),
+    "no number of bins for a bias": (
+        relaxing(BATH, contacts="{bias_mV: 1.7e308, temperature_K: 1}"),
+        "s.yaml, line 2: contacts.bias_mV: no number of bins covers the energies of this scenario",
+    ),
     "few histories": (
         part("simulation", "histories: 63"),
         "simulation.histories: found 63; fewer than one for each batch; allowed: an integer >= 64 "
@@ -631,15 +751,6 @@ FAULTS = {
         ),
         "channel.dimension: found 3; this version computes d = 1 only; allowed: 1",
     ),
-    "relaxation": (
-        part("relaxation", "mechanisms: [{kind: bath, path_nm: 1, direction: kept}]"),
-        "relaxation.mechanisms[0]: found a mapping with the keys kind, path_nm, direction; this "
-        "version computes elastic channels only, without relaxation; allowed: no mechanisms",
-    ),
-    "coupled probe": (
-        with_parts(probes="[{position_nm: 1, coupling: 0.5}]"),
-        "probes[0].coupling: found 0.5; this version computes uncoupled probes only; allowed: 0",
-    ),
     "noise": (
         with_parts(noise="true"),
         "noise: found true; this version does not compute noise; allowed: false",
@@ -648,13 +759,9 @@ FAULTS = {
         part("simulation", "fano_error: 0.1"),
         "simulation.fano_error: found 0.1; this version does not compute noise; allowed: no such",
     ),
-    "heat share error": (
-        part("simulation", "heat_share_error: 0.1"),
-        "heat_share_error: found 0.1; this version does not compute the heat that goes to the latt",
-    ),
 }
 
-LATER = {"d = 2", "d = 3", "relaxation", "coupled probe", "noise", "fano error", "heat share error"}
+LATER = {"d = 2", "d = 3", "noise", "fano error"}
 
 
 @pytest.mark.parametrize("name", FAULTS)
@@ -754,6 +861,15 @@ def test_error_survives_pickling():
         part("channel", "specularity: 1, dimension: 1.0"),
         part("channel", "specularity: {width: 1, height: 1}"),
         part("relaxation", "bath_temperature_K: 0"),
+        relaxing(
+            "{kind: bath, path_nm: 1, direction: randomised}, {kind: carriers, path_nm: 1e9}, "
+            "{kind: optical_phonon, path_nm: 1, energy_meV: 36}",
+            simulation="{heat_share_error: 0.01}",
+        ),
+        with_parts(probes="[{position_nm: 1, coupling: 0.5}, {position_nm: 2, coupling: 1}]"),
+        relaxing(BATH, simulation="{energy_bins: 5000}"),
+        relaxing(BATH, simulation="{cells: 16423, energy_bins: 50}"),
+        part("scattering", "mean_free_path_nm: [{name: bath, mean_free_path_nm: 1}]"),
         with_parts(scattering="{points: [], random: [], sections: []}", noise="false"),
     ],
 )
@@ -1074,6 +1190,39 @@ def test_import_is_light():
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "[]"
+
+
+@pytest.mark.parametrize("phonons", ["", ", {kind: optical_phonon, path_nm: 9, energy_meV: 7}"])
+@pytest.mark.parametrize("asked", ["", "energy_bins: 333"])
+def test_bins_and_cells_are_counted_as_the_run_does(phonons, asked):
+    """The limit on memory is of no use if it counts something else."""
+    from carriersim.checks import _cuts, _energy_bins
+    from carriersim.engine.problem import build
+    from carriersim.yamlfile import read
+
+    text = relaxing(
+        f"{{kind: carriers, path_nm: 5}}{phonons}",
+        contacts="{bias_mV: -30, temperature_K: 9, left: {temperature_K: 20}}",
+        scattering="{points: [{position_nm: 9.6, transmission: 0.5}], "
+        "sections: [{from_nm: 33.3, to_nm: 100.1}]}",
+        probes="[{position_nm: 50.2, coupling: 0.5}]",
+        simulation=f"{{{asked}}}",
+    )
+    problem, (document, _) = build(read_text(text)), read(text, "s.yaml")
+    assert _energy_bins(document)[0] == problem.relaxed.axis.bins
+    assert 200 <= problem.cells <= 200 + _cuts(document)
+
+
+def test_a_check_needs_no_compiled_code():
+    code = (
+        "import sys; from carriersim.scenario import read_text; read_text(sys.stdin.read()); "
+        "print('numba' in sys.modules)"
+    )
+    text = relaxing("{kind: optical_phonon, path_nm: 1, energy_meV: 36}")
+    done = subprocess.run(
+        [sys.executable, "-c", code], input=text, capture_output=True, text=True, check=True
+    )
+    assert done.stdout.strip() == "False"
 
 
 def test_section_without_a_path_is_ballistic():
