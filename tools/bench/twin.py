@@ -7,6 +7,8 @@ import tempfile
 from functools import cache
 from pathlib import Path
 
+import numpy as np
+
 HERE = Path(__file__).parent
 FLAGS = ("-O3", "-march=native")
 
@@ -37,4 +39,22 @@ def elastic(length, path, cells, histories, seed, points=()) -> dict:
     done = subprocess.run(
         [compiled("twin_elastic"), *map(str, arguments)], stdout=subprocess.PIPE, check=True
     )
+    return json.loads(done.stdout)
+
+
+def problem_file(problem: dict) -> str:
+    """Write a relaxing problem for the twin; kept as long as the bench runs.
+
+    problem: numbers and arrays in the order in which twin_relaxing.c reads them.
+    """
+    handle, name = tempfile.mkstemp(dir=_folder().name)
+    with open(handle, "wb") as file:
+        np.concatenate([np.ravel(value) for value in problem.values()]).astype(float).tofile(file)
+    return name
+
+
+def relaxing(problem: str, histories: int, seed: int) -> dict:
+    """Run the relaxing twin on the problem in that file; returns what it printed."""
+    arguments = [compiled("twin_relaxing"), problem, str(histories), str(seed)]
+    done = subprocess.run(arguments, stdout=subprocess.PIPE, check=True)
     return json.loads(done.stdout)
