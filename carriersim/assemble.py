@@ -37,6 +37,9 @@ def _elastic(problem, totals, scenario):
     # A jump or a piece in which nobody was turned back is not known to be 0: one carrier's worth.
     one = abs(value["resistance"]) / totals.histories.sum()
     error["jumps"] = np.maximum(error["jumps"], one)
+    if not problem.transparent:  # nor is what a probe reads where all batches agree
+        error["probe"] = np.maximum(error["probe"], 1.0 / totals.histories.sum())
+        error["four_point"] = np.maximum(error["four_point"], one)
     scatters = observer.piece_scatters()
     error["pieces"] = np.where(scatters, np.maximum(error["pieces"], one), error["pieces"])
     numbers = Numbers(value, error)

@@ -444,7 +444,8 @@ def _print_carriers(result, page):
     rows = []
     for name, key, unit in (
         ("largest departure from local equilibrium", "departure", ""),
-        ("highest carrier temperature", "carrier_temperature_K", "K"),
+        ("hottest right-moving carriers", "carrier_temperature_plus_K", "K"),
+        ("hottest left-moving carriers", "carrier_temperature_minus_K", "K"),
     ):
         found = _greatest(result, key)
         if found is not None:
@@ -570,7 +571,9 @@ def _holds(row):
 
 def _print_missing(result, page):
     """Each reason once, with the quantities that it takes away."""
-    unasked = {"residual"} if result.scenario.noise else {"residual", "noise"}
+    unasked = set() if result.scenario.noise else {"noise"}
+    if not result.relaxes:  # an elastic run iterates nothing
+        unasked |= {"residual", "drift", "drift_sigma"}
     by_reason = {}
     for name, reason in result.why.items():
         if name not in unasked:

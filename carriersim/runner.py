@@ -16,7 +16,6 @@ def simulate(scenario, workers=None, stop=None, progress=None):
     """
     # Compiled code is loaded here, not when carriersim is imported: checking a file needs none.
     from carriersim.assemble import assemble
-    from carriersim.engine.iterate import relax
     from carriersim.engine.problem import build
     from carriersim.engine.solve import Goal, solve
 
@@ -26,7 +25,9 @@ def simulate(scenario, workers=None, stop=None, progress=None):
     goal = Goal(
         asked.target_relative_error, asked.histories, asked.max_seconds, asked.heat_share_error
     )
-    follow = solve if problem.relaxed is None else relax
+    follow = solve
+    if problem.relaxed is not None:
+        from carriersim.engine.iterate import relax as follow
     totals = follow(problem, goal, workers or cores(), stop, progress)
     return assemble(problem, totals, as_done(drawn, totals.all_histories))
 

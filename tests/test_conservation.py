@@ -488,7 +488,7 @@ def test_responses_to_both_contacts_add_to_one():
     potentials, occupations = [], []
 
     @given(scenarios(), st.floats(0, 0.999))
-    @settings(max_examples=200)
+    @settings(max_examples=300)
     def adds(scenario, where):
         run, other = Run(scenario), Run(mirrored(scenario))
         result, mirror = run.result, other.result

@@ -16,7 +16,6 @@ from scipy import constants, integrate
 from scipy.special import expit
 
 from carriersim import limits
-from carriersim import scenario as scenario_module
 from carriersim.engine.problem import build
 from carriersim.limits import two_flux
 from carriersim.limits.listing_relaxation import middle_cell_nm
@@ -27,11 +26,6 @@ from tests.reference_kinetic import BOLTZMANN, Bath, Carriers, Case, Phonon, Pro
 
 POWER_W = 2 * 1e-6 * constants.e**2 / constants.h  # of meV^2, one mode with spin
 BALLISTIC = constants.h / (2 * constants.e**2)
-
-
-@pytest.fixture(autouse=True)
-def open_door(monkeypatch):
-    monkeypatch.setattr(scenario_module, "refuse_unsupported", lambda document: [])
 
 
 def approx(expected, rel=1e-6, abs=0.0):

@@ -1,7 +1,6 @@
 """The relaxing kernel and its rounds against an independent deterministic solution.
 
-Scenarios with relaxation are still refused at the door, so these tests enter behind it. Tolerance:
-4 standard errors; each standard error is small enough that 2 % of wrong physics fails.
+Tolerance: 4 standard errors; each standard error is small enough that 2 % of wrong physics fails.
 """
 
 from dataclasses import replace
@@ -9,7 +8,6 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from carriersim import scenario as scenario_module
 from carriersim.engine.iterate import relax
 from carriersim.engine.mechanisms import temperatures
 from carriersim.engine.problem import build
@@ -22,11 +20,6 @@ TWO_BARRIERS = """
       - {position_nm: 100, transmission: {energy_meV: [0, 30], value: [0.2, 0.8]}}
       - {position_nm: 250, transmission: {energy_meV: [0, 30], value: [0.9, 0.3]}}
 """
-
-
-@pytest.fixture(autouse=True)
-def open_door(monkeypatch):
-    monkeypatch.setattr(scenario_module, "refuse_unsupported", lambda document: [])
 
 
 def run(text, histories, workers=2):

@@ -1,7 +1,6 @@
 """Results of relaxing runs against an independent deterministic solution, and what they hold.
 
-Scenarios with relaxation are still refused at the door, so these tests enter behind it. Tolerance:
-4 standard errors; each standard error is small enough that 2 % of wrong physics fails.
+Tolerance: 4 standard errors; each standard error is small enough that 2 % of wrong physics fails.
 """
 
 from dataclasses import fields, replace
@@ -13,7 +12,6 @@ import pytest
 from scipy.interpolate import CubicSpline
 
 import carriersim as cs
-from carriersim import scenario as scenario_module
 from carriersim.assemble import assemble
 from carriersim.assemble_relaxed import _departure
 from carriersim.engine.iterate import relax
@@ -36,11 +34,6 @@ BIAS, KELVIN = 30.0, 20.0
 WATT_PER_MEV2 = 2.0 * QUANTUM_S * 1e-6
 LARGEST = 0.005  # standard error; times four it is the 2 % that must fail
 BALLISTIC_OHM = 0.5 / QUANTUM_S
-
-
-@pytest.fixture(autouse=True)
-def open_door(monkeypatch):
-    monkeypatch.setattr(scenario_module, "refuse_unsupported", lambda document: [])
 
 
 class Run:

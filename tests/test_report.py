@@ -321,8 +321,9 @@ def test_a_shift_by_noise_is_shown_where_it_counts(share, shown):
 def test_carriers_inside():
     result = relaxing_result()
     rows = block(printed(result, 100), "Carriers inside").splitlines()
-    assert len(rows) == 3
-    for row, values in zip(rows[1:], (result.departure, result.carrier_temperature_K), strict=True):
+    assert len(rows) == 4
+    profiles = result.carrier_temperature_plus_K, result.carrier_temperature_minus_K
+    for row, values in zip(rows[1:], (result.departure, *profiles), strict=True):
         cell = int(values.argmax())
         assert f"{result.x_nm[cell]:.4g} nm" in row
         assert float(row.split(" ± ")[0].split()[-1]) == pytest.approx(values[cell], rel=1e-2)

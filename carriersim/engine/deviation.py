@@ -184,3 +184,11 @@ class Tangent(FromReference):
         strength = np.zeros(w.SOURCES)
         strength[w.LEFT_NUMBER] = 1.0
         return self.warm(strength, warmer)
+
+
+def deviation_of(problem):
+    """What the particles of a problem stand for in a run of its own."""
+    if problem.window.linear:
+        return Tangent(problem)
+    exact = problem.relaxed.setting.exact_energy
+    return FromReference(problem) if exact else FromTrial(problem)

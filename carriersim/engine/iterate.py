@@ -18,7 +18,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from joblib import Parallel
 
-from carriersim.engine.deviation import FromReference, FromTrial, State, Tangent
+from carriersim.engine.deviation import FromTrial, State, Tangent, deviation_of
 from carriersim.engine.observe_relaxed import heat_share
 from carriersim.engine.rounds import Fields, Rounds, Window, compile_for, empty_window, first_size
 from carriersim.engine.solve import Goal, NothingDone, StopRequest
@@ -73,10 +73,9 @@ def relax(problem, goal, workers=1, stop=None, progress=None):
     if problem.window.linear:
         state = None if problem.relaxed.equilibrium else _state_without_bias(problem, workers, stop)
         return _follow(problem, Tangent(problem, state), goal, workers, stop, progress)
-    exact = problem.relaxed.setting.exact_energy
-    deviation = FromReference(problem) if exact else FromTrial(problem)
+    deviation = deviation_of(problem)
     totals = _follow(problem, deviation, goal, workers, stop, progress)
-    if not exact and not stop.flag[0]:
+    if not problem.relaxed.setting.exact_energy and not stop.flag[0]:
         tangent = Tangent(problem, _state(problem, deviation, totals.fields))
         windows = max(len(totals.windows) - 1, FEWEST_WINDOWS)
         with contextlib.suppress(NothingDone):

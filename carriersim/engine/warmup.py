@@ -4,8 +4,10 @@ Several processes that compile the same function for the first time race on the 
 whoever starts many processes runs this first.
 """
 
+from carriersim.engine import rounds
+from carriersim.engine.deviation import deviation_of
 from carriersim.engine.problem import build
-from carriersim.engine.solve import compile_for
+from carriersim.engine.solve import StopRequest, compile_for
 from carriersim.scenario import read_text
 
 VARIANTS = {
@@ -15,12 +17,33 @@ channel: {length_nm: 1, modes: {energy_meV: [0, 1], value: [1, 2]}}
 contacts: {bias_mV: 1, temperature_K: 1}
 """,
 }
+# With relaxation: from the reference and about a trial occupation, without and with tables.
+RELAXING = (
+    ("{kind: bath, path_nm: 1, direction: kept}", 1, "1"),
+    ("{kind: bath, path_nm: 1, direction: kept}", 0, "{energy_meV: [0, 1], value: [1, 2]}"),
+    ("{kind: optical_phonon, path_nm: 1, energy_meV: 1}", 1, "1"),
+    ("{kind: bath, path_nm: 1, direction: kept}", 1, "{energy_meV: [0, 1], value: [1, 2]}"),
+)
 
 
 def main():
     """Compile all variants."""
     for name, text in VARIANTS.items():
         compile_for(build(read_text(text, f"variant {name}")))
+    for number, variant in enumerate(RELAXING):
+        problem = build(read_text(_relaxing(*variant), f"relaxing variant {number}"))
+        deviation = deviation_of(problem)
+        rounds.compile_for(rounds.Rounds(problem, 1, StopRequest(), deviation))
+
+
+def _relaxing(mechanism, bias, path):
+    return f"""
+channel: {{length_nm: 1}}
+contacts: {{bias_mV: {bias}, temperature_K: 1}}
+scattering: {{backscatter_path_nm: {path}}}
+relaxation: {{mechanisms: [{mechanism}]}}
+simulation: {{cells: 1, energy_bins: 10, batches: 8}}
+"""
 
 
 if __name__ == "__main__":
