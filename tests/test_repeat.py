@@ -46,8 +46,26 @@ LINEAR = CONSTANT.replace("bias_mV: 5", "bias_mV: 0").replace(
     "temperature_K: 20", "temperature_K: 0"
 )
 
-PROBLEMS = {"constant": CONSTANT, "tables": TABLE, "linear": LINEAR}
+RELAXING = """
+name: repeat relaxing
+channel: {length_nm: 120}
+contacts: {bias_mV: 40, left: {temperature_K: 100}, right: {temperature_K: 80}}
+scattering:
+  backscatter_path_nm: 150
+  points: [{position_nm: 50, transmission: {energy_meV: [0, 40], value: [0.3, 0.8]}}]
+relaxation:
+  mechanisms:
+    - {kind: optical_phonon, path_nm: 60, energy_meV: 20}
+    - {kind: bath, path_nm: 100, direction: randomised}
+probes: [{position_nm: 80, coupling: 0.3}, {position_nm: 100}]
+simulation: {cells: 12, histories: 30000, batches: 16, seed: 13}
+"""
+
+ELASTIC = {"constant": CONSTANT, "tables": TABLE, "linear": LINEAR}
+PROBLEMS = ELASTIC | {"relaxing": RELAXING, "relaxing linear": RELAXING.replace("V: 40", "V: 0")}
 each_problem = pytest.mark.parametrize("text", PROBLEMS.values(), ids=PROBLEMS)
+# An interrupted relaxing run leaves out the second run, which gives dI/dV.
+each_elastic = pytest.mark.parametrize("text", ELASTIC.values(), ids=ELASTIC)
 
 
 def bits(value):
@@ -147,7 +165,7 @@ def test_repeats_a_run_stopped_by_the_clock(text, tmp_path):
     same(first, cs.simulate(saved, workers=1), ENDING)
 
 
-@each_problem
+@each_elastic
 def test_repeats_a_run_stopped_by_a_request(text, tmp_path):
     """A stop in mid-round throws that round away: what was whole before is the result."""
     asked = read_text(text).replace(

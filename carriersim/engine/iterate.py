@@ -13,7 +13,7 @@ the last three, whose fields are of three noise levels, tell the bias that noise
 
 import contextlib
 import time
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from joblib import Parallel
@@ -26,6 +26,7 @@ from carriersim.engine.solve import Goal, NothingDone, StopRequest
 ROUNDS = 6  # of each window
 FIRST_WINDOWS = 3  # before a result is looked at
 FEWEST_WINDOWS = 2  # that make a result at all
+MAIN_SHARE = 0.65  # of max_seconds, where a run that gives dI/dV follows
 STATE_WINDOWS = 4  # of a run that only finds the state about which to follow the bias
 MOST_WINDOWS = 14
 DRIFT_SIGMA = 3.5  # largest drift between the last two windows, in standard errors
@@ -74,6 +75,8 @@ def relax(problem, goal, workers=1, stop=None, progress=None):
         state = None if problem.relaxed.equilibrium else _state_without_bias(problem, workers, stop)
         return _follow(problem, Tangent(problem, state), goal, workers, stop, progress)
     deviation = deviation_of(problem)
+    if goal.max_seconds and not problem.relaxed.setting.exact_energy:
+        goal = replace(goal, max_seconds=MAIN_SHARE * goal.max_seconds)
     totals = _follow(problem, deviation, goal, workers, stop, progress)
     if not problem.relaxed.setting.exact_energy and not stop.flag[0]:
         tangent = Tangent(problem, _state(problem, deviation, totals.fields))
@@ -104,6 +107,7 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
     compile_for(rounds)  # once, before threads start and the clock runs
     begin = time.perf_counter()
     windows, number, flights = [], 0, 0
+    whole = None  # flights, rounds and fields when the last whole window was done
     size = first_size(problem)
     stopped_by = ""
     with Parallel(n_jobs=workers, prefer="threads", return_as="generator", batch_size=1) as pool:
@@ -125,7 +129,8 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
             if stopped_by:
                 break
             windows.append(window)
-            totals = _totals(windows, flights, number, time.perf_counter() - begin)
+            whole = flights, number, replace(rounds.fields)
+            totals = _totals(windows, *whole, time.perf_counter() - begin)
             _judge(problem, totals, goal, progress)
             stopped_by = totals.stopped_by
             if len(windows) == most:
@@ -133,16 +138,15 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
             size *= 2
     if len(windows) < FEWEST_WINDOWS:
         raise NothingDone(f"stopped before two windows were complete ({stopped_by})")
-    totals = _totals(windows, flights, number, time.perf_counter() - begin)
+    totals = _totals(windows, *whole, time.perf_counter() - begin)
     _judge(problem, totals, goal, None)
     totals.stopped_by = stopped_by
     if stopped_by == "max_seconds":  # in the middle of a window
         totals.converged = totals.residual <= DRIFT_SIGMA and not _asks_for_errors(goal)
-    totals.fields = rounds.fields
     return totals
 
 
-def _totals(windows, flights, rounds, seconds):
+def _totals(windows, flights, rounds, fields, seconds):
     last = merge(windows[-2:])
     return RelaxedTotals(
         histories=last.histories,
@@ -155,6 +159,7 @@ def _totals(windows, flights, rounds, seconds):
         all_histories=int(sum(x.histories.sum() for x in windows)),
         rounds=rounds,
         seconds=seconds,
+        fields=fields,
     )
 
 

@@ -3,7 +3,7 @@
 from carriersim.figures.style import Style
 from carriersim.formatting import format_scaled, format_share
 
-COLUMNS = 1.92  # inches that the columns take at the right of the axes
+COLUMNS = 2.08  # inches that the columns take at the right of the axes
 SHOWN_ERROR = 0.004  # smaller errors, as a share of the whole, have no whisker
 
 
@@ -14,7 +14,7 @@ def write_columns(ax, estimates, whole, unit, style: Style) -> None:
     """
     box = ax.get_position()
     width = ax.figure.get_size_inches()[0] * box.width
-    values, shares = 1.0 + 1.24 / width, 1.0 + 1.8 / width
+    values, shares = 1.0 + 1.4 / width, 1.0 + 1.96 / width
     kwargs = {"transform": ax.get_yaxis_transform(), "va": "center", "fontsize": style.small,
               "color": style.ink, "ha": "right"}  # fmt: skip
     head = {**kwargs, "va": "bottom", "color": style.soft}
