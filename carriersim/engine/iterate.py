@@ -224,6 +224,7 @@ def drift(problem, windows):
             (value.var(axis=1, ddof=1) + old[name].var(axis=1, ddof=1)) / value.shape[1]
         )
         size = np.abs(change) / np.maximum(error, 1e-9 * np.abs(value).max() + 1e-300)
+        size = np.where(np.isfinite(size), size, np.inf)
         if size.max() > worst:
             worst = float(size.max())
             place = "" if name == "the current" else f" near {places[int(size.argmax())]:.4g} nm"

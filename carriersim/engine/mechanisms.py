@@ -61,7 +61,7 @@ def mechanisms_of(scenario):
     for mechanism in scenario.relaxation.mechanisms:
         if mechanism.kind == "optical_phonon":
             energy = mechanism.energy_meV
-            number = 1.0 / np.expm1(energy / kT) if kT > 0.0 else 0.0
+            number = 1.0 / np.expm1(min(energy / kT, 700.0)) if kT > 0.0 else 0.0
             phonons.append((energy, 1.0 / mechanism.path_nm, number))
         else:
             direction = mechanism.direction or "kept"

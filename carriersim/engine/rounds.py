@@ -17,6 +17,7 @@ from carriersim.engine.solve import EVENT_LIMIT, chunks, new_stream, offset_of, 
 FIRST_SIZE = 96  # histories of each batch in the rounds of the first window, at least
 FEW_EVENTS, MOST_FACTOR = 4.0, 16.0  # more of them, up to this factor, when more events feed back
 TRUST = 3.0  # rounds that a trial occupation counts for
+MOST_PAIRS = 0.5  # strength of the pair source, over that of the residual
 BLOCK_PATHS = 0.4  # of the phonons' path: frozen occupations are averaged over such blocks
 SUMS = ("current", "energy", "arrivals", "departures", "cells", "heat", "probe_heat", "turned")
 
@@ -130,9 +131,13 @@ class Rounds:
         phonons = self.relaxed.mechanisms
         if self.deviation.part and phonons.phonon_meV.size:
             lacking = self.coarse(self.fields.occupation - self.deviation.part["field"])
-            self.pairs, self.pair_strength = phonon_pairs(
-                lacking, phonons, self.relaxed.axis, self.widths
-            )
+            pairs, strength = phonon_pairs(lacking, phonons, self.relaxed.axis, self.widths)
+            # Beyond this share it is noise squared, which would breed; what the trial occupation
+            # really lacks is a thousandth, and its square nothing.
+            if strength <= MOST_PAIRS * sum(self.deviation.emitted):
+                self.pairs, self.pair_strength = pairs, strength
+            else:
+                self.pairs, self.pair_strength = no_pairs(), 0.0
 
     def coarse(self, field_):
         """A field averaged over blocks of cells a fraction of the shortest path long.
