@@ -140,11 +140,13 @@ def _fields(problem, observer, totals, batches):
     """Profiles in every cell and occupations on the output grid, with errors."""
     sums = {key: batches[key] for key in ("histories", "cells", "heat")}
     value, error = jackknife(observer.profiles, sums)
-    n, k = float(totals.histories.sum()), totals.samples
+    n = float(totals.histories.sum())
     mean = totals.field_sum / n
-    variance = np.maximum(totals.field_square - totals.field_sum**2 / n, 0.0) / (k - 1) / n
-    spread = np.maximum(np.sqrt(variance), observer.one_visitor(n))
-    spread = np.hypot(spread, _inside_bins(mean))
+    mean = np.concatenate([mean, mean.mean(axis=0, keepdims=True)])
+    variance = totals.field_variance
+    # What a single particle that crosses a cell adds to a bin there.
+    one = totals.strength / n / problem.relaxed.axis.step_meV
+    spread = np.hypot(np.maximum(np.sqrt(variance), one), _inside_bins(mean))
     occupation = observer.occupation(mean)
     spread = np.repeat(spread, observer.finer, axis=-2)
     for i, name in enumerate(("f_plus", "f_minus")):

@@ -24,7 +24,8 @@ _PARTS_OF_RELAXATION = ("bath", "carriers", "optical phonon", "optical phonons")
 
 # Memory of a relaxing run in its longest form, 14 windows and as many for dI/dV. Measured at 402
 # bins x 1250 cells x 64 batches, 2 threads: after 3 windows 0.4 GB with a bath, 0.7 GB with
-# phonons; each window more adds 48 bytes for every bin and cell and 64 for every cell and batch.
+# phonons; each window more adds 16 bytes for every bin and cell (the last three 128 besides, for
+# the errors of occupations) and 64 for every cell and batch.
 MOST_GB = 4.0
 _BYTES_BIN_CELL, _BYTES_BATCH_CELL = 2000.0, 2000.0
 _BYTES_PENDING = 8.0  # for every bin, cell and batch: tallies that wait to be added up

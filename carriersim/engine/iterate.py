@@ -38,9 +38,9 @@ class RelaxedTotals:
 
     histories: np.ndarray
     sums: dict
-    field_sum: np.ndarray
-    field_square: np.ndarray
-    samples: int
+    field_sum: np.ndarray  # (2, B, C) deviations
+    field_variance: np.ndarray  # (3, B, C) of right, left, mean of both, of the mean of the run
+    strength: float  # of all that the particles stand for, in meV
     windows: list = field(default_factory=list)
     flights: int = 0
     all_histories: int = 0
@@ -60,9 +60,22 @@ def merge(windows):
         sum(x.histories for x in windows),
         {key: sum(x.sums[key] for x in windows) for key in windows[0].sums},
         sum(x.field_sum for x in windows),
-        sum(x.field_square for x in windows),
-        sum(x.samples for x in windows),
+        sum(x.groups for x in windows),
     )
+
+
+def field_variance(window):
+    """Variance of the mean occupation (3, B, C): right, left, mean of both; from the groups."""
+    count = len(window.groups)
+    histories = np.array([window.histories[g::count].sum() for g in range(count)], float)
+    total = histories.sum()
+    square = np.zeros((3, *window.field_sum.shape[1:]))
+    mean = window.field_sum / total
+    for part, group in zip(histories, window.groups, strict=True):
+        away = group / part - mean
+        square[:2] += part * away**2
+        square[2] += part * (0.5 * (away[0] + away[1])) ** 2
+    return square / (count - 1) / total
 
 
 def relax(problem, goal, workers=1, stop=None, progress=None):
@@ -129,7 +142,9 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
             if stopped_by:
                 break
             windows.append(window)
-            whole = flights, number, replace(rounds.fields)
+            whole = flights, number, replace(rounds.fields), rounds.strength
+            for old in windows[:-2]:
+                old.groups = None
             totals = _totals(windows, *whole, time.perf_counter() - begin)
             _judge(problem, totals, goal, progress)
             stopped_by = totals.stopped_by
@@ -146,14 +161,14 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
     return totals
 
 
-def _totals(windows, flights, rounds, fields, seconds):
+def _totals(windows, flights, rounds, fields, strength, seconds):
     last = merge(windows[-2:])
     return RelaxedTotals(
         histories=last.histories,
         sums=last.sums,
         field_sum=last.field_sum,
-        field_square=last.field_square,
-        samples=last.samples,
+        field_variance=field_variance(last),
+        strength=strength,
         windows=windows,
         flights=flights,
         all_histories=int(sum(x.histories.sum() for x in windows)),

@@ -13,7 +13,6 @@ from carriersim.engine.energies import Bins
 from carriersim.engine.mechanisms import (
     RANDOM_BATH,
     RANDOM_CARRIERS,
-    heat_strength,
     reference,
     temperatures,
 )
@@ -36,7 +35,7 @@ class RelaxedObserver:
     """Turns sums over histories into the numbers of a result; see result.py for their meaning."""
 
     def __init__(self, problem, field_sum):
-        """field_sum: (3, B, C), tells at which energies carriers are turned."""
+        """field_sum: (2, B, C), tells at which energies carriers are turned."""
         self.problem, self.window, self.relaxed = problem, problem.window, problem.relaxed
         self.bath_kelvin = problem.scenario.bath_temperature_K
         self.full = 1.0 if self.window.linear else self.window.mu_left_meV
@@ -198,12 +197,6 @@ class RelaxedObserver:
         if self.window.linear:
             return fine
         return reference(self.relaxed.axis, self.bath_kelvin, self.finer)[:, None] + fine
-
-    def one_visitor(self, histories):
-        """What a single particle that crosses a cell adds to the occupation of a bin there."""
-        kelvin = self.window.temperature_left_K, self.window.temperature_right_K
-        strength = abs(self.full) + sum(heat_strength(k, self.bath_kelvin) for k in kelvin)
-        return strength / histories / self.relaxed.axis.step_meV
 
 
 def in_parts(value, parts):

@@ -7,7 +7,7 @@ import numpy as np
 from joblib import delayed
 from numba import njit
 
-from carriersim.engine import streams, tallies
+from carriersim.engine import streams
 from carriersim.engine import wander as w
 from carriersim.engine.flights import DONE
 from carriersim.engine.pairs import no_pairs, phonon_pairs
@@ -17,6 +17,9 @@ from carriersim.engine.solve import EVENT_LIMIT, chunks, new_stream, offset_of, 
 FIRST_SIZE = 96  # histories of each batch in the rounds of the first window, at least
 FEW_EVENTS, MOST_FACTOR = 4.0, 16.0  # more of them, up to this factor, when more events feed back
 TRUST = 3.0  # rounds that a trial occupation counts for
+# Occupations get their errors from groups of batches: all batches would take too much memory, and
+# rounds of one batch share its fields, so that they err together.
+GROUPS = 16
 MOST_PAIRS = 0.5  # strength of the pair source, over that of the residual
 BLOCK_PATHS = 0.4  # of the phonons' path: frozen occupations are averaged over such blocks
 SUMS = ("current", "energy", "arrivals", "departures", "cells", "heat", "probe_heat", "turned")
@@ -28,9 +31,9 @@ class Window:
 
     histories: np.ndarray
     sums: dict
-    field_sum: np.ndarray
-    field_square: np.ndarray
-    samples: int = 0
+    field_sum: np.ndarray  # (2, B, C)
+    # (GROUPS, 2, B, C) the same for each group of batches; None once it isn't needed any more.
+    groups: np.ndarray | None
     noise: float = 0.0  # histories-weighted mean of 1/(histories behind the frozen fields)
 
 
@@ -55,9 +58,9 @@ def first_size(problem):
 
 
 def empty_window(problem, batches):
-    shape = (3, problem.relaxed.axis.bins, problem.cells)
-    zeros = {key: 0.0 for key in SUMS}
-    return Window(np.zeros(batches, np.int64), zeros, np.zeros(shape), np.zeros(shape))
+    shape = (2, problem.relaxed.axis.bins, problem.cells)
+    groups = np.zeros((min(GROUPS, batches), *shape), np.float32)
+    return Window(np.zeros(batches, np.int64), {key: 0.0 for key in SUMS}, np.zeros(shape), groups)
 
 
 def empty_tally(problem):
@@ -85,6 +88,17 @@ def spread_bins(bins, scale, field_):
             field_[1, b, c] = scale * (left + bins[b, c, 3])
             right += bins[b, c, 0]
             left += bins[b, c, 2]
+
+
+@njit(cache=True, error_model="numpy")
+def add_field(field_, histories, total, group):
+    """Add a batch's field (2, B, C), times its histories, to a round's sum and to its group's."""
+    for side in range(2):
+        for b in range(field_.shape[1]):
+            for c in range(field_.shape[2]):
+                value = histories * field_[side, b, c]
+                total[side, b, c] += value
+                group[side, b, c] += value
 
 
 def spread_cells(cells):
@@ -122,6 +136,7 @@ class Rounds:
         if deviation.part:
             self.fields.weight = TRUST * first_size(problem) * self.batches
         self.pairs, self.pair_strength = no_pairs(), 0.0
+        self.strength = 0.0  # of all sources in the last round, in meV
 
     def prepare(self):
         """What all batches share in a round: the source of pairs that the linear form leaves out.
@@ -188,6 +203,7 @@ class Rounds:
         scalars = tally.scalars
         values = {
             "flights": int(scalars[w.FLIGHTS]),
+            "strength": total,
             "field": field_,
             "current": scale * scalars[w.OUT_RIGHT],
             "energy": scale * np.array([scalars[w.ENERGY_LEFT], scalars[w.ENERGY_RIGHT]]),
@@ -218,17 +234,19 @@ class Rounds:
         else:
             parts = (tasks[chunk] for chunk in chunks(len(tasks), self.workers))
             results = chain.from_iterable(pool(delayed(several)(self.run, part) for part in parts))
-        field_sum, field_square = np.zeros_like(window.field_sum), np.zeros_like(window.field_sum)
+        field_sum = np.zeros_like(window.field_sum)
         kept, complete = [], True
         for result in results:
             if result is None:
                 complete = False
             elif complete:
-                tallies.add_field(size * result.pop("field"), size, field_sum, field_square)
+                group = window.groups[len(kept) % len(window.groups)]
+                add_field(result.pop("field"), float(size), field_sum, group)
                 kept.append(result)
         if not complete:
             return 0, False
         self.done += size
+        self.strength = max(r["strength"] for r in kept)
         values = {key: np.array([r[key] for r in kept]) for key in SUMS}
         histories = size * self.batches
         window.noise += self.fields.noise() * histories if self.fields.weight else 0.0
@@ -236,8 +254,6 @@ class Rounds:
         for key in SUMS:
             window.sums[key] = window.sums[key] + size * values[key]
         window.field_sum += field_sum
-        window.field_square += field_square
-        window.samples += self.batches
         return (sum(r["flights"] for r in kept), values, field_sum / histories), True
 
     def learn(self, values, occupation, histories, number):
@@ -253,7 +269,7 @@ class Rounds:
         arrivals = values["arrivals"]
         reading = (taken[0] * arrivals[..., 0] + taken[1] * arrivals[..., 1]) / total
         fields.probes = fields.probes + gain * (reading - fields.probes)
-        fields.occupation = fields.occupation + gain * (occupation[:2] - fields.occupation)
+        fields.occupation = fields.occupation + gain * (occupation - fields.occupation)
 
 
 def compile_for(rounds):
