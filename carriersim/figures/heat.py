@@ -62,9 +62,10 @@ def _rows(result):
         rest = sum(probes[i][1].value for i in ranks[_KEPT_PROBES:])
         others = f"the other {len(probes) - len(kept)} probes"
         probes = [*(probes[i] for i in kept), (others, rest, "probe")]
+    lattice = [("lattice", heat.lattice, "lattice")] if _lattice_takes(result) else []
     return [
         ("left contact", heat.left_contact, "interface"),
-        ("lattice", heat.lattice, "lattice"),
+        *lattice,
         *probes,
         ("right contact", heat.right_contact, "interface"),
     ]
