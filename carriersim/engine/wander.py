@@ -317,7 +317,8 @@ def wander(
     fine_per_meV = FINE * per_step
     elastic_of = thickness / geometry.length_nm
     any_phonons = phonon_meV.size > 0
-    rate_of = (elastic_of + rates.sum()) * cell_nm  # without what depends on energy
+    steady = rates.sum()
+    rate_of = (elastic_of + steady) * cell_nm  # without what depends on energy
     free_of = 1.0 / rate_of
     whole = 0.5 if not setting.tangent else 1.0  # mean energy of a redraw, over its potential
     left_part = 1.0 / share[LEFT_NUMBER] if share[LEFT_NUMBER] > 0.0 else 0.0
@@ -497,7 +498,7 @@ def wander(
                     elastic, rate, free = elastic_of[segment], rate_of[segment], free_of[segment]
                     if tables is not None:
                         elastic += varying_rate(segment, energy, tables)
-                        rate = (elastic + rates.sum()) * cell_nm[segment]
+                        rate = (elastic + steady) * cell_nm[segment]
                         free = 1.0 / rate
                     if any_phonons:
                         row = min(max(bin_ + 1, 0), top + 1)
