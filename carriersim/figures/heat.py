@@ -24,7 +24,7 @@ def make_figure(result, style: Style = STYLE):
         return None
     along_too = _lattice_takes(result)
     block = len(_rows(result)) * _ROW
-    lower = _BETWEEN + _LOWER + _BOTTOM if along_too else 0.55
+    lower = _BETWEEN + _LOWER + _BOTTOM if along_too else 0.75
     height = _TOP + block + lower
     figure = new_figure(style.width, height, style)
     draw_shares(place(figure, 1.5, COLUMNS, height - _TOP - block, _TOP), result, style)
