@@ -195,6 +195,39 @@ def test_repeats_a_run_stopped_by_a_request(text, tmp_path):
     assert saved.simulation.histories == again.histories
 
 
+@pytest.mark.parametrize("ending", ["interrupted", "max_seconds"])
+def test_relaxing_run_stopped_in_a_window(ending, tmp_path):
+    """What was whole before is the result; only dI/dV, from a run of its own, may be missing."""
+    asked = read_text(RELAXING).replace(
+        {"simulation.histories": None, "simulation.relative_error": 1e-7}
+    )
+    stop, seconds = StopRequest(), 1.2
+    if ending == "max_seconds":
+        asked = asked.replace({"simulation.max_seconds": seconds})
+
+    class StopInWindow:
+        """Asks for an end, or waits for the clock, in the window after the fourth."""
+
+        windows = 0
+
+        def update(self, histories, relative_error, target, seconds):
+            self.windows += 1  # the first two are not told
+            self.histories = histories
+            if ending == "interrupted" and self.windows == 2:
+                threading.Timer(0.05, stop.set, ["interrupted"]).start()
+
+    progress = StopInWindow()
+    first = cs.simulate(asked, workers=2, stop=stop, progress=progress)
+    assert first.stopped_by == ending and not first.converged
+    assert first.histories == progress.histories and first.iterations == 6 * (2 + progress.windows)
+    missing = {"conductance_S", "differential_resistance_ohm"} if ending == "interrupted" else set()
+    for name in missing:
+        assert getattr(first, name) is None and first.why[name]
+    first.save(tmp_path / "place")
+    again = cs.simulate(cs.load(tmp_path / "place" / "scenario.yaml"), workers=1)
+    same(first, again, (*ENDING, *missing, "why"))
+
+
 def test_stop_before_the_first_round_is_no_result():
     stop = StopRequest()
     stop.set("interrupted")

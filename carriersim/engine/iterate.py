@@ -127,8 +127,8 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
         while not stopped_by:
             window = empty_window(problem, rounds.batches)
             for _ in range(ROUNDS):
-                outcome, whole = rounds.one_round(size, pool, window)
-                if not whole:
+                outcome = rounds.one_round(size, pool, window)
+                if outcome is None:
                     stopped_by = stop.reason or "event_limit"
                     break
                 late = goal.max_seconds and time.perf_counter() - begin > goal.max_seconds

@@ -226,7 +226,11 @@ class Rounds:
         return lengths
 
     def one_round(self, size, pool, window):
-        """Run a round, add it to the window and to the fields; (flights, whether it is whole)."""
+        """Run a round and add it to the window; None if it was stopped.
+
+        Returns flights, values by batch and the mean field, from which `learn` takes the next
+        round's fields.
+        """
         self.prepare()
         tasks = [(b, size) for b in range(self.batches)]
         if self.workers == 1:
@@ -244,7 +248,7 @@ class Rounds:
                 add_field(result.pop("field"), float(size), field_sum, group)
                 kept.append(result)
         if not complete:
-            return 0, False
+            return None
         self.done += size
         self.strength = max(r["strength"] for r in kept)
         values = {key: np.array([r[key] for r in kept]) for key in SUMS}
@@ -254,7 +258,7 @@ class Rounds:
         for key in SUMS:
             window.sums[key] = window.sums[key] + size * values[key]
         window.field_sum += field_sum
-        return (sum(r["flights"] for r in kept), values, field_sum / histories), True
+        return sum(r["flights"] for r in kept), values, field_sum / histories
 
     def learn(self, values, occupation, histories, number):
         """Let the running averages take in a round of some histories, the number-th."""
