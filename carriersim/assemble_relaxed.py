@@ -7,10 +7,10 @@ from carriersim.engine.observe import departure_of, root_of
 from carriersim.engine.observe_relaxed import (
     RelaxedObserver,
     batches_of,
-    local_equilibrium,
     noise_bias,
 )
 from carriersim.estimates import Numbers, common_reasons, field_arrays, make_result
+from carriersim.fermi import mean_occupation
 from carriersim.jackknife import jackknife
 
 NOT_ALONG = (
@@ -175,7 +175,7 @@ def _departure(observer, deviation, variance, mu_meV, kelvin):
     edges = observer.edges_meV
     centres, widths = 0.5 * (edges[1:] + edges[:-1]), np.diff(edges)
     f = observer.relaxed.reference[:, None] + deviation
-    local = local_equilibrium(edges, mu_meV, kelvin)
+    local = mean_occupation(edges, mu_meV, kelvin)
     square, derivative = departure_of(f, centres, widths, mu_meV, kelvin, local)
     scale = np.where(kelvin > 0.0, BOLTZMANN_MEV_PER_K * kelvin, 1.0)
     square = square - np.einsum("ec,e->c", variance, widths) / scale

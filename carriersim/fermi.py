@@ -23,6 +23,24 @@ def occupation(energy_meV, mu_meV, temperature_K):
     return np.where(cold, step, warm_value)
 
 
+def mean_occupation(edges_meV, mu_meV, temperature_K):
+    """Means of F(E; mu, T) over bins, (B, ...), from edges (B+1,), mu and T of shape (...).
+
+    F is the slope of -kT ln(1 + exp((mu - E)/kT)), so bins may be wider than kT, also at 0 K. nan
+    where T is nan.
+    """
+    mu, kT = np.broadcast_arrays(
+        np.asarray(mu_meV, float), BOLTZMANN_MEV_PER_K * np.asarray(temperature_K, float)
+    )
+    edges = np.asarray(edges_meV, float).reshape(-1, *[1] * mu.ndim)
+    cold = ~(kT > 0.0)
+    warm = np.where(cold, 1.0, kT)
+    filled = np.where(
+        cold, np.maximum(mu - edges, 0.0), warm * np.logaddexp(0.0, (mu - edges) / warm)
+    )
+    return np.where(np.isnan(kT), np.nan, -np.diff(filled, axis=0) / np.diff(edges, axis=0))
+
+
 def minus_slope(energy_meV, mu_meV, temperature_K):
     """-dF/dE in 1/meV for T > 0; shapes broadcast. At 0 K it is a Dirac delta at mu: ValueError."""
     kT = BOLTZMANN_MEV_PER_K * np.asarray(temperature_K, float)

@@ -546,7 +546,7 @@ def test_differences_of_both_signs_get_a_colour_each():
 def test_bin_means_hold_the_number_at_any_temperature():
     edges = np.array([-50.0, -10.0, 3.0, 4.0, 20.0, 90.0])
     kelvin = np.array([0.0, 1.0, 100.0, np.nan])
-    means = energies.bin_means(edges, np.array([3.5, 3.5, 3.5, 3.5]), kelvin)
+    means = fermi.mean_occupation(edges, np.array([3.5, 3.5, 3.5, 3.5]), kelvin)
     assert means[:, 0] == pytest.approx([1.0, 1.0, 0.5, 0.0, 0.0])
     fine = np.linspace(-50.0, 90.0, 280_001)
     for column in (1, 2):

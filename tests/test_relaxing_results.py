@@ -19,12 +19,11 @@ from carriersim.engine.mechanisms import temperatures
 from carriersim.engine.observe_relaxed import (
     heat_share,
     in_parts,
-    local_equilibrium,
     noise_bias,
 )
 from carriersim.engine.problem import build
 from carriersim.engine.solve import Goal
-from carriersim.fermi import occupation
+from carriersim.fermi import mean_occupation, occupation
 from carriersim.runner import as_done
 from carriersim.scenario import read_text
 from tests import reference_kinetic as reference
@@ -608,7 +607,7 @@ def test_noise_is_taken_off_the_departure():
     generator = np.random.default_rng(8)
     edges = np.linspace(-60.0, 60.0, 121)
     mu, kelvin = np.full(500, 4.0), np.full(500, 50.0)
-    local = local_equilibrium(edges, mu, kelvin)
+    local = mean_occupation(edges, mu, kelvin)
     variance = np.full(local.shape, 1e-4)
     observer = SimpleNamespace(
         window=SimpleNamespace(linear=False),
@@ -643,7 +642,7 @@ def test_mean_of_a_fermi_function_over_bins():
     fine = np.linspace(0.0, 1.0, 4001)
     inner = edges[:-1, None] + np.diff(edges)[:, None] * 0.5 * (fine[1:] + fine[:-1])
     means = occupation(inner[..., None], mu, kelvin).mean(axis=1)
-    np.testing.assert_allclose(local_equilibrium(edges, mu, kelvin), means, atol=2e-4)
-    exact = local_equilibrium(edges, mu, kelvin)
+    np.testing.assert_allclose(mean_occupation(edges, mu, kelvin), means, atol=2e-4)
+    exact = mean_occupation(edges, mu, kelvin)
     smooth = means[:, :2]
     np.testing.assert_allclose(exact[:, :2], smooth, atol=1e-7)

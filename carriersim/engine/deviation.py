@@ -39,18 +39,23 @@ class State:
 class FromReference:
     """f = F(E; mu_R, T_b) + d: sources in the contacts, and where something is hotter than T_b."""
 
-    trial = None
     part: dict = {}  # noqa: RUF012
     strengths = None
     tangent = False
 
-    def __init__(self, problem):
-        self.problem = problem
+    def __init__(self, problem, trial=None):
+        """trial: a Trial that phonons meet in place of the reference."""
+        self.problem, self.trial = problem, trial
         self.widths = np.diff(problem.cell_edges_nm)
         relaxed = problem.relaxed
         self.bath = problem.scenario.bath_temperature_K
         self.fine = reference(relaxed.axis, self.bath, FINE)
-        self.mechanisms = with_bounds(relaxed.mechanisms, relaxed.axis, self.bath)
+        away = None
+        if trial is not None:
+            away = trial.value
+            # Nothing starts from its residual unless a class asks for it.
+            self.strengths = Strengths(*(np.ones(1) for _ in Strengths._fields))
+        self.mechanisms = with_bounds(relaxed.mechanisms, relaxed.axis, self.bath, away)
         self.probe_kT = BOLTZMANN_MEV_PER_K * relaxed.probe_kelvin
         shape = (3, problem.cells)
         self.base = w.Base(
@@ -122,11 +127,7 @@ class FromTrial(FromReference):
     """f = h + e about a trial occupation h: the source is what h lacks."""
 
     def __init__(self, problem):
-        super().__init__(problem)
-        self.trial = solve_trial(problem)
-        self.mechanisms = with_bounds(
-            self.mechanisms, problem.relaxed.axis, self.bath, self.trial.value
-        )
+        super().__init__(problem, solve_trial(problem))
         self.part = trial_part(problem, self.trial)
         self.strengths, *self.emitted = strengths(problem, self.trial)
         mu, kT = (field_.mean(axis=-1) for field_ in (self.trial.mu, self.trial.kT))
@@ -150,16 +151,9 @@ class Tangent(FromReference):
     tangent = True
 
     def __init__(self, problem, state=None):
-        super().__init__(problem)
+        super().__init__(problem, None if state is None else state.trial)
         if state is None:  # equilibrium
             state = State(self.base.mu, self.base.kT, self.base.probe_mu, None)
-        self.trial = state.trial
-        if self.trial is not None:
-            self.mechanisms = with_bounds(
-                self.mechanisms, problem.relaxed.axis, self.bath, self.trial.value
-            )
-            # Nothing starts from its residual here.
-            self.strengths = Strengths(*(np.ones(1) for _ in Strengths._fields))
         step = self.steps(state.mu)
         self.base = w.Base(state.mu, step, state.kT, state.probe_mu, self.probe_kT)
 

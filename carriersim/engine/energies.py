@@ -204,3 +204,12 @@ def shares(bins, drives):
     for drive in useful:
         total += (1.0 - FLOOR_SHARE) * drive / len(useful)
     return total / total.sum()
+
+
+def limited_slope(below, above):
+    """Change across a bin from the steps to its neighbours: their mean, but never beyond either.
+
+    0 at an extremum. Van Leer, J. Comput. Phys. 23 (1977) 276.
+    """
+    most = 2.0 * np.minimum(np.abs(below), np.abs(above))
+    return np.clip(0.5 * (below + above), -most, most) * (below * above > 0.0)

@@ -91,3 +91,12 @@ def varying_rate(segment, energy, tables):
     for i in range(tables.path_first[segment], tables.path_first[segment + 1]):
         rate += 1.0 / table_value(tables.path_index[i], energy, tables)
     return rate
+
+
+@njit(cache=True, error_model="numpy")
+def phonon_shift(phonon_meV, step_meV):
+    """Whole bins in a phonon's energy, and what is left as a part of a bin; rounding is nothing."""
+    steps = phonon_meV / step_meV
+    whole = np.int64(np.floor(steps + 1e-9))
+    part = steps - whole
+    return whole, part if part > 1e-9 else 0.0

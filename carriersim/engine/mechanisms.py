@@ -83,7 +83,7 @@ def with_bounds(mechanisms, axis, kelvin, deviation=None):
     Rates sum to (2 N + 1 + f_upper - f_lower)/path, f the mean of both directions: at least the
     largest upper and the smallest lower occupation of the bins that a bin's energies reach.
     """
-    edges = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
+    edges = edges_of(axis)
     step = fermi.occupation(edges, 0.0, kelvin)
     if kelvin == 0.0:
         step = np.where(edges <= 0.0, 1.0, 0.0)
@@ -163,15 +163,14 @@ def _dividing(phonon_meV, mu_meV, step):
     return phonon_meV / numbers[np.argmin(np.maximum(misfit, 0.01))]
 
 
+def edges_of(axis, parts=1):
+    """Edges of an Axis' bins, each cut into parts; (B parts + 1,)."""
+    return axis.first_meV + axis.step_meV / parts * np.arange(axis.bins * parts + 1)
+
+
 def reference(axis, kelvin, parts=1):
     """F_r averaged over parts of bins, (B parts,): right contact's mu, lattice temperature."""
-    axis = Axis(axis.first_meV, axis.step_meV / parts, axis.bins * parts)
-    edges = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
-    kT = BOLTZMANN_MEV_PER_K * kelvin
-    if kT == 0.0:
-        return np.clip(-edges[:-1] / axis.step_meV, 0.0, 1.0)
-    softplus = kT * np.logaddexp(0.0, -edges / kT)  # its slope is -F
-    return -np.diff(softplus) / axis.step_meV
+    return fermi.mean_occupation(edges_of(axis, parts), 0.0, kelvin)
 
 
 def heat_strength(kelvin, bath_kelvin):

@@ -8,11 +8,12 @@ from itertools import pairwise
 
 import numpy as np
 
-from carriersim.constants import AMPERE_PER_MEV, BOLTZMANN_MEV_PER_K, WATT_PER_MEV2
-from carriersim.engine.energies import Bins
+from carriersim.constants import AMPERE_PER_MEV, WATT_PER_MEV2
+from carriersim.engine.energies import Bins, limited_slope
 from carriersim.engine.mechanisms import (
     RANDOM_BATH,
     RANDOM_CARRIERS,
+    edges_of,
     reference,
     temperatures,
 )
@@ -46,7 +47,7 @@ class RelaxedObserver:
         self.jumps = problem.is_scatterer | self.coupled
         self.widths_nm = np.diff(problem.cell_edges_nm)
         axis = self.relaxed.axis
-        self.edges_meV = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
+        self.edges_meV = edges_of(axis)
         self.finer = max(1, -(-FEWEST_ENERGIES // axis.bins))
         self.grid = Bins(cut_in_parts(self.edges_meV, self.finer), np.empty(0))
         self.pieces = self._piece_cells()
@@ -202,28 +203,15 @@ class RelaxedObserver:
 def in_parts(value, parts):
     """Means over bins (..., B, C) as means over equal parts of them, (..., B parts, C).
 
-    Inside a bin the value is linear, with the slope of its neighbours or, where that would leave
-    their range, twice the smaller step (the limiter of van Leer, J. Comput. Phys. 23 (1977) 276).
+    Inside a bin the value is linear, with a slope that stays in its neighbours' range.
     """
     step = np.diff(value, axis=-2)
     end = np.zeros_like(value[..., :1, :])
     below, above = np.concatenate([end, step], axis=-2), np.concatenate([step, end], axis=-2)
-    least = 2.0 * np.minimum(np.abs(below), np.abs(above))
-    slope = np.clip(0.5 * (below + above), -least, least) * (below * above > 0.0)
+    slope = limited_slope(below, above)
     places = (np.arange(parts) + 0.5) / parts - 0.5
     fine = value[..., :, None, :] + slope[..., :, None, :] * places[:, None]
     return fine.reshape(*value.shape[:-2], -1, value.shape[-1])
-
-
-def local_equilibrium(edges_meV, mu_meV, kelvin):
-    """Means over bins of F(E; mu, T) for each cell, (B, C); mu and T (C,)."""
-    kT = BOLTZMANN_MEV_PER_K * np.asarray(kelvin)
-    distance = edges_meV[:, None] - mu_meV
-    warm = np.where(kT > 0.0, kT, 1.0)
-    # Its slope is -F; at 0 K its limit.
-    integral = np.where(kT > 0.0, warm * np.logaddexp(0.0, -distance / warm), -distance)
-    integral = np.where((kT > 0.0) | (distance < 0.0), integral, 0.0)
-    return -np.diff(integral, axis=0) / np.diff(edges_meV)[:, None]
 
 
 # --- the bias that noise leaves -----------------------------------------------------------------

@@ -2,10 +2,12 @@
 
 import numpy as np
 
+from carriersim.engine.events import phonon_shift
 from carriersim.engine.residual import cumulative
 
 
 def no_pairs():
+    """The source that emits nothing."""
     return {
         "pair": np.ones(1),
         "pair_place": np.zeros(1, np.int32),
@@ -19,11 +21,9 @@ def phonon_pairs(deviation, phonons, axis, widths_nm):
     """Source of pairs, - e_upper e_lower / (2 path) in the lower state, as a list to draw from."""
     strengths, places, bins, kinds, which = [], [], [], [], []
     for k, energy in enumerate(phonons.phonon_meV):
-        steps = energy / axis.step_meV
-        shift = steps - np.floor(steps + 1e-9)
-        shift = 0.0 if shift < 1e-9 else shift
+        whole, shift = phonon_shift(energy, axis.step_meV)
         for late in (0, 1) if shift else (0,):
-            above = int(np.floor(steps + 1e-9)) + late
+            above = whole + late
             part = (shift if late else 1.0 - shift) * axis.step_meV
             if above >= axis.bins:
                 continue

@@ -19,14 +19,17 @@ import numpy as np
 from numba import njit
 
 from carriersim.constants import BOLTZMANN_MEV_PER_K
-from carriersim.engine.events import passes_at, varying_rate
+from carriersim.engine.energies import limited_slope
+from carriersim.engine.events import passes_at, phonon_shift, varying_rate
 from carriersim.engine.mechanisms import (
     KEPT_BATH,
     KEPT_CARRIERS,
     RANDOM_BATH,
     RANDOM_CARRIERS,
+    edges_of,
     temperatures,
 )
+from carriersim.fermi import mean_occupation
 
 MOST_SWEEPS = 3000
 CLOSE = 1e-6  # largest change of an occupation in the last sweep
@@ -74,26 +77,16 @@ class Medium(NamedTuple):
     balance: np.ndarray  # (B,) per nm, what bins alone would change in the equilibrium
 
 
-def mean_fermi(edges_meV, mu_meV, kT):
-    """Means of the Fermi function over bins; (B, ...) for mu and kT of shape (...)."""
-    mu, kT = np.broadcast_arrays(np.asarray(mu_meV, float), np.asarray(kT, float))
-    edges = edges_meV.reshape(-1, *([1] * mu.ndim))
-    cold = kT <= 0.0
-    warm = np.where(cold, 1.0, kT)
-    integral = np.where(
-        cold, np.maximum(mu - edges, 0.0), warm * np.logaddexp(0.0, (mu - edges) / warm)
-    )
-    return -np.diff(integral, axis=0) / np.diff(edges, axis=0)
-
-
 def solve_trial(problem):
     """The Trial of a problem with relaxation."""
     relaxed, window = problem.relaxed, problem.window
     axis, setting = relaxed.axis, relaxed.setting
-    edges = axis.first_meV + axis.step_meV * np.arange(axis.bins + 1)
+    edges = edges_of(axis)
     medium = medium_of(problem, edges)
     value = np.empty((2, axis.bins, problem.cells, 2))
-    value[:] = mean_fermi(edges, 0.5 * window.mu_left_meV, setting.bath_kT)[:, None, None]
+    value[:] = mean_occupation(
+        edges, 0.5 * window.mu_left_meV, problem.scenario.bath_temperature_K
+    )[:, None, None]
     rates = relaxed.mechanisms.rates
     targets = np.zeros_like(value)
     probe = np.zeros((axis.bins, problem.nodes_nm.size))
@@ -176,21 +169,20 @@ def medium_of(problem, edges):
             [[varying_rate(s, e, relaxed.tables) for s in range(nodes - 1)] for e in centres]
         )
     phonons = relaxed.mechanisms
-    steps = phonons.phonon_meV / relaxed.axis.step_meV
-    shift = np.floor(steps + 1e-9).astype(np.int64)
-    k = BOLTZMANN_MEV_PER_K
+    shifts = [phonon_shift(w, relaxed.axis.step_meV) for w in phonons.phonon_meV]
+    shift, part = np.array(shifts, float).reshape(-1, 2).T
     medium = Medium(
         elastic=elastic,
         passing=passing,
         from_left=relaxed.probes.from_left,
         from_right=relaxed.probes.from_right,
-        left=mean_fermi(edges, window.mu_left_meV, k * window.temperature_left_K),
-        right=mean_fermi(edges, 0.0, k * window.temperature_right_K),
+        left=mean_occupation(edges, window.mu_left_meV, window.temperature_left_K),
+        right=mean_occupation(edges, 0.0, window.temperature_right_K),
         first_cell=geometry.first_cell,
         cells=geometry.cells,
         widths=np.diff(problem.cell_edges_nm),
-        shift=shift,
-        part=np.maximum(steps - shift, 0.0),
+        shift=shift.astype(np.int64),
+        part=part.copy(),
         rate=phonons.phonon_rate,
         number=phonons.phonon_number,
         balance=np.zeros(centres.size),
@@ -235,31 +227,25 @@ def _probe_potentials(problem, number):
 def _targets(problem, edges, moments):
     """Rates x occupations that baths and carriers aim at, and the occupation probes emit with."""
     mu, kT, probe_mu = moments
-    setting, rates = problem.relaxed.setting, problem.relaxed.mechanisms.rates
+    rates, bath = problem.relaxed.mechanisms.rates, problem.scenario.bath_temperature_K
+    carriers = kT / BOLTZMANN_MEV_PER_K
     result = np.zeros((2, edges.size - 1, mu.shape[1], 2))
-    for kind, random, heat in (
-        (KEPT_BATH, False, setting.bath_kT),
-        (RANDOM_BATH, True, setting.bath_kT),
-        (KEPT_CARRIERS, False, kT),
-        (RANDOM_CARRIERS, True, kT),
+    for kind, random, kelvin in (
+        (KEPT_BATH, False, np.full_like(kT, bath)),
+        (RANDOM_BATH, True, np.full_like(kT, bath)),
+        (KEPT_CARRIERS, False, carriers),
+        (RANDOM_CARRIERS, True, carriers),
     ):
         for side in (0, 1) if rates[kind] else ():
             field = 2 if random else side
-            warmth = heat[field] if heat is kT else heat
-            result[side] += rates[kind] * mean_fermi(edges, mu[field], warmth)
-    probe_kT = BOLTZMANN_MEV_PER_K * problem.relaxed.probe_kelvin
-    return result, mean_fermi(edges, probe_mu, probe_kT)
+            result[side] += rates[kind] * mean_occupation(edges, mu[field], kelvin[field])
+    return result, mean_occupation(edges, probe_mu, problem.relaxed.probe_kelvin)
 
 
 def _slopes(value):
-    """Change across each bin: half that between its neighbours, but never beyond either of them.
-
-    Van Leer, J. Comput. Phys. 23 (1977) 276. Steps between bins, as at 0 K, stay steps.
-    """
+    """Change across each bin, limited, so that steps between bins, as at 0 K, stay steps."""
     steps = np.diff(np.pad(value, ((0, 0), (1, 1), (0, 0), (0, 0))), axis=1)
-    below, above = steps[:, :-1], steps[:, 1:]
-    most = 2.0 * np.minimum(np.abs(below), np.abs(above))
-    return np.where(below * above > 0.0, np.clip(0.5 * (below + above), -most, most), 0.0)
+    return limited_slope(steps[:, :-1], steps[:, 1:])
 
 
 @njit(cache=True, error_model="numpy")

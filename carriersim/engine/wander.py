@@ -1,9 +1,9 @@
 """The particle kernel with relaxation, one dimension.
 
-A particle stands for a piece of the deviation from the reference occupation F(E; mu_R, T_b); its
-sign is +1 or -1, its energy changes in events. Frozen fields (potentials, occupations) come from
+A particle stands for a piece of the deviation from a known occupation (see deviation.py), of
+either sign; its energy changes in events. Frozen fields (potentials, temperatures) come from
 earlier rounds. Positions count cell widths inside a segment; energies are exact, bins only for the
-tallies and for frozen occupations.
+tallies.
 """
 
 from typing import NamedTuple
@@ -11,7 +11,7 @@ from typing import NamedTuple
 import numpy as np
 from numba import njit
 
-from carriersim.engine.events import GOLDEN, passes_at, varying_rate
+from carriersim.engine.events import GOLDEN, passes_at, phonon_shift, varying_rate
 from carriersim.engine.flights import DONE, STOPPED, TOO_MANY_EVENTS
 from carriersim.engine.mechanisms import FINE, KEPT_BATH, RANDOM_BATH, RANDOM_CARRIERS
 from carriersim.engine.residual import Strengths, at_node, deviation, inside
@@ -35,9 +35,6 @@ from carriersim.engine.streams import (
     TRIAL_NODE,
 ) = range(8)
 SOURCES = 8
-# Columns of Tally.cells for each direction: number, energy, and energy that carriers events keep,
-# each as (signed number of flight ends, sum of their places).
-NUMBER, ENERGY, KEPT_ENERGY = 0, 2, 4
 # Rows of Tally.scalars.
 OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS = range(4)
 # What happens to a particle; BORN: it starts its first flight.
@@ -100,7 +97,9 @@ class Tally(NamedTuple):
     """What the kernel adds to."""
 
     bins: np.ndarray  # (B, C, 4): right (ends, places), left (ends, places)
-    cells: np.ndarray  # (C, 12): right 6 columns, left 6 columns
+    # (C, 12): for right, then for left: number, energy, and energy that carriers events keep, each
+    # as (signed number of flight ends, sum of their places).
+    cells: np.ndarray
     arrivals: np.ndarray  # (K, 2) signed arrivals from the left, from the right
     departures: np.ndarray  # (K, 2) signed departures to the right, to the left
     heat: np.ndarray  # (C,) energy given to the lattice
@@ -234,12 +233,12 @@ def _emit(
 def _emit_pair(
     rest, geometry, mechanisms, sources, setting, uniforms, lanes, position, tally, start
 ):  # fmt: skip
-    """Newton's pair source: + in the lower state, - in the upper one, times the pair's sign."""
+    """A pair of the quadratic source: + in the lower state, - above, times the pair's sign."""
     entry = min(np.searchsorted(sources.pair, rest, side="right"), sources.pair.size - 1)
     cell, kind = sources.pair_place[entry], sources.pair_kind[entry]
     w = mechanisms.phonon_meV[sources.pair_phonon[entry]]
     # Where the step does not divide w the upper state lies in one of two bins: early or late part.
-    shift = w / setting.step_meV - np.floor(w / setting.step_meV)
+    _, shift = phonon_shift(w, setting.step_meV)
     u = _uniform(uniforms, lanes, position)
     part = 1.0 - shift + shift * u if kind & 8 else (1.0 - shift) * u
     energy = setting.first_meV + (sources.pair_bin[entry] + part) * setting.step_meV

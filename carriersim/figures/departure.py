@@ -3,9 +3,9 @@
 import numpy as np
 
 from carriersim.constants import BOLTZMANN_MEV_PER_K
+from carriersim.fermi import mean_occupation
 from carriersim.figures import along
 from carriersim.figures.energies import (
-    bin_means,
     colour_bar,
     energy_unit,
     energy_window,
@@ -121,7 +121,7 @@ def _difference(result, window):
     """Pixels of mean f - F(E; mu, T_e), and the root mean square of their standard errors."""
     cells, columns = np.unique(pixel_cells(result), return_inverse=True)
     rows = pixel_rows(result, window)
-    local = bin_means(
+    local = mean_occupation(
         result.energy_edges_meV, result.mu_meV[cells], result.carrier_temperature_K[cells]
     )
     mean = 0.5 * (result.f_plus[:, cells] + result.f_minus[:, cells])

@@ -75,22 +75,8 @@ def equilibrium(result, mu_meV, kelvin):
     energies relax, else the value at its centre.
     """
     if result.relaxes:
-        return bin_means(result.energy_edges_meV, np.array([mu_meV]), np.array([kelvin]))[:, 0]
+        return fermi.mean_occupation(result.energy_edges_meV, mu_meV, kelvin)
     return fermi.occupation(result.energy_meV, mu_meV, kelvin)
-
-
-def bin_means(edges_meV, mu_meV, kelvin):
-    """Means of F(E; mu, T) over energy bins: (edges - 1, cells) for mu and T of each cell.
-
-    Bins may be wider than kT, also at T = 0.
-    """
-    kT = BOLTZMANN_MEV_PER_K * np.asarray(kelvin, float)
-    below = np.asarray(mu_meV) - np.asarray(edges_meV, float)[:, None]
-    warm = np.where(kT > 0.0, kT, 1.0)
-    # F is the slope of -kT log(1 + exp((mu - E)/kT)).
-    filled = np.where(kT > 0.0, warm * np.logaddexp(0.0, below / warm), np.maximum(below, 0.0))
-    means = -np.diff(filled, axis=0) / np.diff(edges_meV)[:, None]
-    return np.where(np.isfinite(kT), means, np.nan)
 
 
 def colour_bar(figure, picture, ax, label, style: Style = STYLE, beside=-0.62):

@@ -82,25 +82,15 @@ class RelaxingKernel:
     def __init__(self, scenario: dict, histories: int):
         from carriersim.engine.deviation import FromReference
         from carriersim.engine.iterate import relax
-        from carriersim.engine.mechanisms import with_bounds
         from carriersim.engine.problem import build
-        from carriersim.engine.residual import Strengths
         from carriersim.engine.rounds import Rounds
         from carriersim.engine.solve import Goal, StopRequest
         from carriersim.engine.trial import solve_trial
 
         self.problem = build(_load(scenario))
         self.phonons = self.problem.relaxed.mechanisms.phonon_meV.size > 0
-        deviation = FromReference(self.problem)
-        if self.phonons:
-            deviation.trial = solve_trial(self.problem)
-            deviation.mechanisms = with_bounds(
-                deviation.mechanisms,
-                self.problem.relaxed.axis,
-                deviation.bath,
-                deviation.trial.value,
-            )
-            deviation.strengths = Strengths(*(np.ones(1) for _ in Strengths._fields))  # none
+        trial = solve_trial(self.problem) if self.phonons else None
+        deviation = FromReference(self.problem, trial)
         self.rounds = Rounds(self.problem, 1, StopRequest(), deviation)
         if not self.phonons:
             fields = relax(self.problem, Goal(None, histories, None), 1).fields
@@ -200,9 +190,6 @@ def _load(scenario: dict):
         from carriersim.scenario import read_text
     except ImportError as error:
         raise NotThereError(f"carriersim cannot be imported: {error}") from None
-
-    # To be deleted when scenarios with relaxation are open:
-    read_text.__globals__["refuse_unsupported"] = lambda document: []
 
     return read_text(json.dumps(scenario))  # JSON is YAML
 
