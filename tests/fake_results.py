@@ -4,10 +4,8 @@
 that keeps the direction, and probes that take every carrier.
 """
 
-from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from itertools import pairwise
-from unittest.mock import patch
 
 import numpy as np
 
@@ -260,13 +258,6 @@ def _breakdown(scenario, points, ballistic, estimate):
     return tuple(parts)
 
 
-@contextmanager
-def relaxation_allowed():
-    """Scenarios with relaxation and coupled probes can be read within."""
-    with patch("carriersim.scenario.refuse_unsupported", lambda document: []):
-        yield
-
-
 def relaxing_result(changes=None, text=RELAXING, *, seed=0, noise=0.003, energies=400, **overrides):
     """A Result of a channel with relaxation: exact fields plus noise.
 
@@ -274,12 +265,11 @@ def relaxing_result(changes=None, text=RELAXING, *, seed=0, noise=0.003, energie
     than one between two stations; stations are contacts and coupled probes, which take all that
     arrives (coupling 1). For bias 0 the fields are those of the elastic channel.
     """
-    with relaxation_allowed():
-        scenario = scenarios.read_text(text, changes=changes)
-        kinds = {mechanism.kind for mechanism in scenario.relaxation.mechanisms}
-        # Carriers get as hot as k T_e = 0.28 eV.
-        hot = 2.2 * abs(scenario.contacts.bias_mV) if "carriers" in kinds else 0.0
-        result = fake_result(text, changes, seed=seed, noise=noise, hot_meV=hot, energies=energies)
+    scenario = scenarios.read_text(text, changes=changes)
+    kinds = {mechanism.kind for mechanism in scenario.relaxation.mechanisms}
+    # Carriers get as hot as k T_e = 0.28 eV.
+    hot = 2.2 * abs(scenario.contacts.bias_mV) if "carriers" in kinds else 0.0
+    result = fake_result(text, changes, seed=seed, noise=noise, hot_meV=hot, energies=energies)
     if not result.linear_response:
         rng = np.random.default_rng(seed + 1)
         result = replace(result, **_relaxed_quantities(result, noise, rng))
