@@ -1,10 +1,12 @@
 """Random scatterers: drawn once from their own seed, then as good as given."""
 
+import math
+
 import numpy as np
 
 from carriersim.faults import Fault, ScenarioError
 from carriersim.scenario import Scenario
-from carriersim.schema import MAX_POINTS, Point, RandomGroup, TransmissionRange
+from carriersim.schema import MAX_POINTS, Point, TransmissionRange
 
 # Sets this stream apart from every other use of the same seed.
 _STREAM = 0xD150_4DE4
@@ -12,38 +14,68 @@ _ATTEMPTS = 100
 
 
 def draw_random_points(scenario: Scenario) -> Scenario:
-    """Return the scenario with its random scatterers drawn.
+    """Return the scenario with its random scatterers drawn; those drawn before stay as they are.
 
-    `scattering.points` then lists given and drawn points by position, and `scattering.random` is
-    empty. The draw depends on the disorder seed (the seed unless given) and on `scattering` and the
-    length of the channel alone; each group has its own stream.
+    `scattering.points` then lists given and drawn points by position, the drawn ones with the
+    number of their group, and the groups in `scattering.random` are marked as drawn. The draw
+    depends on the disorder seed (the seed unless given) and on `scattering`, the probes' places
+    and the length of the channel alone; each group has its own stream.
 
     Raises:
         ScenarioError: too many scatterers were drawn, or a stretch is too short for its number.
     """
     scattering = scenario.scattering
-    if not scattering.random:
+    if not scattering.undrawn:
         return scenario
     seed = scenario.simulation.resolved_disorder_seed
     points = list(scattering.points)
-    taken = {point.position_nm for point in (*points, *scenario.probes)}
+    taken = _taken(scenario, points)
     for index, group in enumerate(scattering.random):
-        sequence = np.random.SeedSequence(seed, spawn_key=(_STREAM, index))
-        generator = np.random.Generator(np.random.PCG64(sequence))
-        points += _draw(scenario, index, group, generator, taken, MAX_POINTS - len(points))
-    points.sort(key=lambda point: point.position_nm)
-    drawn = scattering.model_copy(update={"points": tuple(points), "random": ()})
+        if not group.drawn:
+            sequence = np.random.SeedSequence(seed, spawn_key=(_STREAM, index))
+            generator = np.random.Generator(np.random.PCG64(sequence))
+            points += _draw(scenario, index, generator, taken, MAX_POINTS - len(points))
+    groups = (group.model_copy(update={"drawn": True}) for group in scattering.random)
+    update = {"points": _by_place(points), "random": tuple(groups)}
+    drawn = scattering.model_copy(update=update)
     return scenario.model_copy(update={"scattering": drawn})
+
+
+def fresh_points(scenario: Scenario, generator: np.random.Generator) -> tuple[Point, ...]:
+    """Draw the scatterers of all random groups anew, whether drawn before or not; by position.
+
+    For an ensemble of channels: the given points, which have no group, are not among them, but
+    places differ from theirs and from those of probes.
+
+    Raises:
+        ScenarioError: a stretch is too short for its number.
+    """
+    given = [point for point in scenario.scattering.points if point.group is None]
+    taken = _taken(scenario, given)
+    points = []
+    for index in range(len(scenario.scattering.random)):
+        points += _draw(scenario, index, generator, taken, math.inf)
+    return _by_place(points)
+
+
+def _taken(scenario: Scenario, points: list[Point]) -> set[float]:
+    """Places in nm where no random scatterer may be."""
+    return {owner.position_nm for owner in (*points, *scenario.probes)}
+
+
+def _by_place(points: list[Point]) -> tuple[Point, ...]:
+    return tuple(sorted(points, key=lambda point: point.position_nm))
 
 
 def _draw(
     scenario: Scenario,
     index: int,
-    group: RandomGroup,
     generator: np.random.Generator,
     taken: set[float],
-    room: int,
+    room: float,
 ) -> list[Point]:
+    """Draw the scatterers of one group, at most `room`; `taken` grows by their places."""
+    group = scenario.scattering.random[index]
     low = 0.0 if group.from_nm is None else group.from_nm
     high = scenario.channel.length_nm if group.to_nm is None else group.to_nm
     if group.count is not None:
@@ -66,6 +98,7 @@ def _draw(
             transmission=transmission,
             angular=group.angular,
             reflection=group.reflection,
+            group=index,
         )
         for place, transmission in zip(places, transmissions, strict=True)
     ]

@@ -4,6 +4,7 @@ Every key carries its meaning, unit and allowed values; messages and the JSON sc
 What spans several keys is in checks.py.
 """
 
+import math
 from typing import Annotated, Any, Literal
 
 from pydantic import model_validator
@@ -18,6 +19,7 @@ from carriersim.quantities import (
     Form,
     Fraction,
     Modes,
+    ModesTable,
     NotNegative,
     Number,
     Part,
@@ -34,6 +36,18 @@ from carriersim.quantities import (
 )
 
 MAX_POINTS = 10_000  # so that a saved scenario stays below the size limit of scenario files
+
+
+def modes_of(wavenumber_per_nm: float, width_nm: float, height_nm: float | None = None) -> float:
+    """Modes of a Fermi wavenumber k: k W/pi (d = 2), k^2 W H/(4 pi) (d = 3); inf on overflow.
+
+    Datta, Electronic Transport in Mesoscopic Systems, 1995: half waves across the width; in three
+    dimensions the cross-section of the Fermi sphere.
+    """
+    modes = wavenumber_per_nm * width_nm / math.pi
+    if height_nm is None:
+        return modes
+    return modes * (wavenumber_per_nm * height_nm) / 4.0
 
 
 class FaceSpecularity(Part):
@@ -84,6 +98,12 @@ class Channel(Part):
         "a number in 0..1, or a mapping {width, height} of such numbers",
         1.0,
     )
+    bulk_resistivity_uohm_cm: Positive | None = key(
+        "Resistivity of the bulk material in micro-ohm cm (d = 3), where R_B A and the mean free "
+        "path shall not give it",
+        "a number > 0",
+        None,
+    )
 
     @model_validator(mode="before")
     @classmethod
@@ -91,6 +111,28 @@ class Channel(Part):
         if not isinstance(data, dict) or data.get("fermi_wavenumber_per_nm") is not None:
             return data
         return data if data.get("modes") is not None else data | {"modes": 1.0}
+
+    @property
+    def resolved_modes(self) -> float | ModesTable:
+        """M, given or from the Fermi wavenumber; not rounded to whole modes."""
+        if self.fermi_wavenumber_per_nm is None:
+            return self.modes
+        sides = (self.width_nm, self.height_nm)[: self.dimension - 1]
+        return modes_of(self.fermi_wavenumber_per_nm, *sides)
+
+    @property
+    def face_specularity(self) -> tuple[float, float]:
+        """Specularity of the faces that limit the width, and of those that limit the height."""
+        if isinstance(self.specularity, FaceSpecularity):
+            return self.specularity.width, self.specularity.height
+        return self.specularity, self.specularity
+
+    @property
+    def area_nm2(self) -> float | None:
+        """Cross-section W H in nm^2 (d = 3 with walls), else None."""
+        if self.dimension != 3 or self.width_nm is None or self.height_nm is None:
+            return None
+        return self.width_nm * self.height_nm
 
 
 class Contact(Part):
@@ -133,6 +175,12 @@ class Point(Part):
     transmission: Transmission = key("Transmission", TRANSMISSION)
     angular: Angular = angular_key()
     reflection: Reflection = reflection_key()
+    group: Whole | None = key(
+        "Number, from 0, of the group in scattering.random that it was drawn from; written by runs",
+        "the number of a drawn group",
+        None,
+        ge=0,
+    )
 
 
 class TransmissionRange(Part):
@@ -143,7 +191,7 @@ class TransmissionRange(Part):
 
 
 class RandomGroup(Part):
-    """Scatterers at random places, drawn once."""
+    """Scatterers at random places, drawn once. Once drawn, they are among the points."""
 
     count: Whole | None = key(
         "How many, exactly", f"an integer in 0..{MAX_POINTS}", None, ge=0, le=MAX_POINTS
@@ -163,6 +211,13 @@ class RandomGroup(Part):
         "Where they end, in nm (channel.length_nm)",
         "a number above from_nm, up to channel.length_nm",
         None,
+    )
+    drawn: bool = key(
+        "Whether its scatterers stand in scattering.points already, with this group's number; "
+        "written by runs",
+        "true or false",
+        False,
+        strict=True,
     )
 
 
@@ -187,6 +242,11 @@ class Scattering(Part):
         "a list of mappings {count or density_per_um, transmission}",
         (),
     )
+
+    @property
+    def undrawn(self) -> tuple[RandomGroup, ...]:
+        """The random groups whose scatterers are not among the points yet."""
+        return tuple(group for group in self.random if not group.drawn)
 
 
 class Mechanism(Part):
@@ -307,6 +367,13 @@ class Simulation(Part):
     )
     batches: Whole = key(
         "Number of batches that give the errors", "an integer in 8..4096", 64, ge=8, le=4096
+    )
+    trajectories: Whole = key(
+        "Number of sample trajectories kept for the figure (d = 2, 3)",
+        "an integer in 0..50",
+        6,
+        ge=0,
+        le=50,
     )
 
     @property

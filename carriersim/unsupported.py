@@ -11,8 +11,6 @@ def refuse_unsupported(document: Document) -> list[Fault]:
     def refuse(path: KeyPath, allowed: str, why: str) -> None:
         faults.append(document.fault(path, allowed, f"this version {why}"))
 
-    if document.get(("channel", "dimension")) in (2, 3):
-        refuse(("channel", "dimension"), "1", "computes d = 1 only")
     if document.get(("noise",)) is True:
         refuse(("noise",), "false", "does not compute noise")
     if document.get(("simulation", "fano_error")) is not None:

@@ -282,8 +282,8 @@ BAD_FILES = {
     "not yaml": ("channel: [1, 2", r"bad.yaml, line \d"),
     "empty": ("", "bad.yaml"),
     "not this version": (
-        QUICK.replace("length_nm: 100", "length_nm: 100\n  dimension: 3"),
-        "this version computes d = 1 only",
+        QUICK + "\nnoise: true\n",
+        "this version does not compute noise",
     ),
     "too large for memory": (
         RELAXING.replace("cells: 10,", "cells: 100000,"),

@@ -5,8 +5,11 @@ import math
 import numpy as np
 import pytest
 
-from carriersim.disorder import draw_random_points
+from carriersim.disorder import draw_random_points, fresh_points
+from carriersim.keypaths import plain
+from carriersim.memory_check import cuts
 from carriersim.scenario import ScenarioError, read_text, to_yaml
+from carriersim.yamlfile import Document
 
 START = "channel: {length_nm: %s}\ncontacts: {bias_mV: 1, temperature_K: 4}\nscattering: {%s}\n"
 
@@ -29,9 +32,66 @@ def test_drawn_points():
     strong = [p.position_nm for p in scenario.scattering.points if p.transmission == 1]
     assert len(strong) == 2
     assert all(10 < place < 20 for place in strong)
-    assert scenario.scattering.random == ()
+    assert scenario.scattering.undrawn == ()
     assert draw_random_points(scenario) is scenario
     assert read_text(to_yaml(scenario)) == scenario
+
+
+def test_groups_are_remembered():
+    random = "{count: 5, transmission: 0.5}, {count: 2, transmission: 1, from_nm: 10, to_nm: 20}"
+    scattering = drawn(random).scattering
+    assert [group.drawn for group in scattering.random] == [True, True]
+    assert [group.count for group in scattering.random] == [5, 2]
+    groups = {number: [] for number in (None, 0, 1)}
+    for point in scattering.points:
+        groups[point.group].append(point)
+    assert [point.position_nm for point in groups[None]] == [100.0]
+    assert [point.transmission for point in groups[0]] == [0.5] * 5
+    assert [point.transmission for point in groups[1]] == [1.0] * 2
+    assert all(10 < point.position_nm < 20 for point in groups[1])
+
+
+def test_saved_yaml_of_a_draw():
+    text = to_yaml(drawn("{count: 1, transmission: 0.5, to_nm: 50}"))
+    begin, end = text.index("scattering:"), text.index("relaxation:")
+    first, second = text[begin:end].splitlines()[3:5]
+    assert first.endswith("transmission: 0.5, angular: constant, reflection: specular, group: 0}")
+    assert second.endswith("transmission: 0.5, angular: constant, reflection: specular}")
+    assert text[begin:end].endswith(
+        "  random:\n    - {count: 1, transmission: 0.5, angular: constant, reflection: specular, "
+        "to_nm: 50.0, drawn: true}\n"
+    )
+
+
+def test_drawn_scatterers_count_once():
+    """For the most that a scenario may hold, and for the cells that they cut."""
+    scenario = drawn("{count: 6000, transmission: 0.5}, {density_per_um: 15000, transmission: 1}")
+    assert read_text(to_yaml(scenario)) == scenario
+    undrawn = read_text(START % (200, "random: [{density_per_um: 1000, transmission: 1}]"))
+    assert cuts(Document("s.yaml", plain(undrawn))) == 201
+    points = len(scenario.scattering.points)
+    assert cuts(Document("s.yaml", plain(scenario))) == points + 1
+
+
+def test_a_group_added_after_the_draw():
+    """What was drawn before stays, and the new group is as if all had been drawn together."""
+    first, second = "{count: 5, transmission: 0.5}", "{density_per_um: 40, transmission: 0.8}"
+    together = drawn(f"{first}, {second}")
+    assert {point.group for point in together.scattering.points} == {None, 0, 1}
+    both = [*drawn(first).scattering.random, together.scattering.random[1]]
+    both[1] = both[1].model_copy(update={"drawn": False})
+    later = drawn(first).replace({"scattering.random": both})
+    assert draw_random_points(later) == together
+
+
+def test_a_drawn_group_that_is_taken_away():
+    with pytest.raises(ScenarioError) as caught:
+        drawn("{count: 2, transmission: 0.5}").replace({"scattering.random": []})
+    lines = str(caught.value).splitlines()
+    assert len(lines) == 2
+    assert all(
+        "].group: found 0; there is no such group; allowed: no such key, or" in x for x in lines
+    )
 
 
 def test_draw_depends_on_the_disorder_seed_alone():
@@ -65,6 +125,58 @@ def test_drawn_numbers_and_transmissions_are_distributed_as_asked():
         assert scaled.max() < 1
         assert abs(scaled.mean() - 1 / 2) < 4 * math.sqrt(1 / 12 / scaled.size)
         assert abs((scaled**2).mean() - 1 / 3) < 4 * math.sqrt(4 / 45 / scaled.size)
+
+
+def test_fresh_points():
+    random = (
+        "{count: 4, transmission: 0.5, angular: tunnel, reflection: diffuse}, "
+        "{density_per_um: 100, transmission: {low: 0.2, high: 0.6}, from_nm: 50, to_nm: 150}"
+    )
+    space = {"channel__dimension": 3, "probes": [{"position_nm": 20.0}]}
+    scenario = drawn(random, **space)
+    text = START % (200, f"points: [{{position_nm: 100, transmission: 0.5}}], random: [{random}]")
+    changes = {"channel.dimension": 3, "probes": space["probes"]}
+    undrawn = read_text(text, changes=changes)
+    points = fresh_points(scenario, np.random.default_rng(3))
+    # The same from the scenario as it was written and as a run saves it, given points apart.
+    assert points == fresh_points(undrawn, np.random.default_rng(3))
+    generator = np.random.default_rng(4)
+    numbers = []
+    for _ in range(400):
+        points = fresh_points(scenario, generator)
+        places = [point.position_nm for point in points]
+        assert places == sorted(set(places))
+        assert not {20.0, 100.0} & set(places)
+        first, second = ([p for p in points if p.group == group] for group in (0, 1))
+        assert len(first) == 4 and len(first) + len(second) == len(points)
+        assert {(p.transmission, p.angular, p.reflection) for p in first} == {
+            (0.5, "tunnel", "diffuse")
+        }
+        assert all(50 < p.position_nm < 150 and 0.2 < p.transmission < 0.6 for p in second)
+        numbers.append(len(second))
+    # A Poisson number of mean 10, see above; each draw is another one.
+    assert abs(np.mean(numbers) - 10) < 4 * math.sqrt(10 / 400)
+    assert abs(np.var(numbers) - 10) < 4 * math.sqrt(210 / 400)
+
+
+def test_fresh_points_avoid_given_places():
+    """A stretch with one free place: drawn anew it is that place again, beside the given one."""
+    values = [50.0]
+    for _ in range(3):
+        values.append(math.nextafter(values[-1], 60.0))
+    low, given, free, high = values
+    text = START % (
+        200,
+        f"points: [{{position_nm: {given!r}, transmission: 0.5}}], random: [{{count: 1, "
+        f"transmission: 1, from_nm: {low!r}, to_nm: {high!r}}}]",
+    )
+    scenario = draw_random_points(read_text(text))
+    for seed in range(5):
+        (point,) = fresh_points(scenario, np.random.default_rng(seed))
+        assert point.position_nm == free
+    crowded = scenario.replace({"probes": [{"position_nm": free}], "scattering.points[1]": None})
+    with pytest.raises(ScenarioError, match=r"random\[0\]: no room for 1 places in 50.0"):
+        fresh_points(crowded, np.random.default_rng(0))
 
 
 def test_no_room_for_the_places():

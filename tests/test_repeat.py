@@ -116,7 +116,7 @@ def test_saved_scenario_repeats_the_run(text, tmp_path):
     first.save(tmp_path / "first")
     saved = cs.load(tmp_path / "first" / "scenario.yaml")
     assert saved == first.scenario
-    assert saved.scattering.random == () and saved.simulation.histories == first.histories
+    assert saved.scattering.undrawn == () and saved.simulation.histories == first.histories
     second = cs.simulate(saved, workers=1)
     same(first, second)
     second.save(tmp_path / "second")

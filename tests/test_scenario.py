@@ -50,18 +50,38 @@ scattering:
     - {from_nm: 0, to_nm: 10, mean_free_path_nm: 5}
     - {from_nm: 10, to_nm: 1000, backscatter_path_nm: [{name: a, mean_free_path_nm: 1}]}
   points:
-    - {position_nm: 100, transmission: 0.2}
+    - {position_nm: 100, transmission: 0.2, group: 2}
     - {position_nm: 50, transmission: {energy_meV: [0, 1], value: [1, 0.5]}}
   random:
     - {count: 3, transmission: {low: 0.1, high: 0.5}, from_nm: 100}
     - {density_per_um: 2.5, transmission: 1}
+    - {count: 2, transmission: 1, drawn: true}
 relaxation: {bath_temperature_K: 10, substrate_conductance_W_per_K_m: 0.1}
 probes:
   - {position_nm: 500}
   - {position_nm: 600, weight_right: 1, temperature_K: 3}
 accuracy: {potential_mV: 0.1, occupation: 0.01, heat_share: 0.1, fano: 0.1, resistance_relative: 1}
 simulation: {seed: 0, disorder_seed: 7, relative_error: 0.01, histories: 1e6, max_seconds: 10,
-  cells: 50, energy_bins: 100, batches: 8}
+  cells: 50, energy_bins: 100, batches: 8, trajectories: 3}
+"""
+
+SPACE = """\
+channel:
+  length_nm: 100
+  dimension: 3
+  fermi_wavenumber_per_nm: 13.6
+  width_nm: 40
+  height_nm: 20
+  specularity: {width: 1, height: 0.25}
+  bulk_resistivity_uohm_cm: 1.68
+contacts:
+  bias_mV: 1
+  temperature_K: 300
+  left: {transmission: 0.5, angular: tunnel, reflection: diffuse}
+scattering:
+  mean_free_path_nm: 39
+  random: [{density_per_um: 50, transmission: 0.8, angular: tunnel, reflection: specular}]
+simulation: {trajectories: 12}
 """
 
 
@@ -98,6 +118,7 @@ def test_defaults():
     simulation = scenario.simulation
     assert (simulation.seed, simulation.cells, simulation.batches) == (1, 200, 64)
     assert simulation.energy_bins is None
+    assert simulation.trajectories == 6
     assert simulation.target_relative_error == 0.005
     assert simulation.resolved_disorder_seed == 1
     temperatures = (scenario.left_temperature_K, scenario.right_temperature_K)
@@ -120,13 +141,71 @@ def test_every_key_of_an_elastic_scenario():
     assert bulk.backscatter_path_nm.value == (100.0, 200.0)
     assert scenario.scattering.sections[0].mean_free_path_nm == 5.0
     assert scenario.scattering.sections[1].backscatter_path_nm[0].name == "a"
-    assert scenario.scattering.points[0] == Point(position_nm=100, transmission=0.2)
+    assert scenario.scattering.points[0] == Point(position_nm=100, transmission=0.2, group=2)
     assert scenario.scattering.random[0].transmission.high == 0.5
     assert scenario.scattering.random[1].density_per_um == 2.5
+    assert scenario.scattering.undrawn == scenario.scattering.random[:2]
     assert scenario.probes[1].weight_right == 1.0
     assert scenario.simulation.histories == 1_000_000
     assert type(scenario.simulation.histories) is int
     assert scenario.simulation.resolved_disorder_seed == 7
+
+
+def test_every_key_of_a_scenario_in_space():
+    scenario = read_text(SPACE)
+    channel = scenario.channel
+    assert (channel.dimension, channel.width_nm, channel.height_nm) == (3, 40.0, 20.0)
+    assert (channel.modes, channel.fermi_wavenumber_per_nm) == (None, 13.6)
+    assert channel.bulk_resistivity_uohm_cm == 1.68
+    assert channel.face_specularity == (1.0, 0.25)
+    assert scenario.contacts.left.angular == "tunnel"
+    assert scenario.contacts.left.reflection == "diffuse"
+    assert scenario.scattering.random[0].angular == "tunnel"
+    assert scenario.simulation.trajectories == 12
+    assert read_text(to_yaml(scenario)) == scenario
+
+
+def test_modes_of_a_wavenumber():
+    """Against counts of standing waves in the cross-section, Dirichlet walls (Weyl's law).
+
+    The count of a ribbon is exact but for its fraction; that of a rectangle of perimeter P has the
+    term -k P/(4 pi) next (Weyl 1911; Kac, Am. Math. Monthly 73, 4 (1966) 1; from memory).
+    """
+    ribbon = "dimension: 2, width_nm: 50, fermi_wavenumber_per_nm: 0.7"
+    modes = read_text(part("channel", ribbon)).channel.resolved_modes
+    assert int(modes) == sum(math.pi * n / 50 < 0.7 for n in range(1, 100))
+    assert modes == pytest.approx(11.14084601642)  # 35/pi, not rounded
+    channel = read_text(SPACE).channel
+    k, width, height = 13.6, 40.0, 20.0
+    m, n = np.mgrid[1:400, 1:400]
+    count = np.count_nonzero((np.pi * m / width) ** 2 + (np.pi * n / height) ** 2 < k**2)
+    perimeter = k * (width + height) / (2 * math.pi)
+    assert channel.resolved_modes - perimeter == pytest.approx(count, rel=2e-3)
+    # The wavenumber stays what the scenario gives, also in the record of a run.
+    saved = read_text(to_yaml(read_text(SPACE).with_defaults())).channel
+    assert saved == channel and "modes" not in to_yaml(read_text(SPACE))
+
+
+def test_modes_given():
+    assert read_text(MINIMAL).channel.resolved_modes == 1.0
+    assert read_text(part("channel", "modes: 3.5, dimension: 3")).channel.resolved_modes == 3.5
+    assert read_text(FULL).channel.resolved_modes.value == (0.0, 1.0, 2.0)
+
+
+@pytest.mark.parametrize(
+    ("inside", "area", "faces"),
+    [
+        ("dimension: 1", None, (1.0, 1.0)),
+        ("dimension: 2, width_nm: 5, specularity: 0.3", None, (0.3, 0.3)),
+        ("dimension: 3", None, (1.0, 1.0)),
+        ("dimension: 3, width_nm: 5, height_nm: 4, specularity: 0", 20.0, (0.0, 0.0)),
+        ("dimension: 3, width_nm: 5, height_nm: 4, specularity: {height: 0}", 20.0, (1.0, 0.0)),
+    ],
+)
+def test_cross_section(inside, area, faces):
+    channel = read_text(part("channel", inside)).channel
+    assert channel.area_nm2 == area
+    assert channel.face_specularity == faces
 
 
 def test_frozen_and_hashable():
@@ -525,6 +604,38 @@ FAULTS = {
         ),
         "scattering.random: found 10020 scatterers; allowed: at most 10000 scatterers, points and",
     ),
+    "too many, were those drawn before drawn anew": (
+        part("scattering", "random: [{density_per_um: 50005, transmission: 1, drawn: true}]"),
+        "scattering.random: found 10001 scatterers; allowed: at most 10000 scatterers, points and",
+    ),
+    "drawn": (
+        part("scattering", "random: [{count: 1, transmission: 1, drawn: 1}]"),
+        "s.yaml, line 3: scattering.random[0].drawn: found 1; allowed: true or false",
+    ),
+    "group below 0": (
+        points(f"{{{POINT}, group: -1}}"),
+        "scattering.points[0].group: found -1; allowed: the number of a drawn group",
+    ),
+    "group that is not there": (
+        part(
+            "scattering",
+            f"\n  random: [{{count: 1, transmission: 1, drawn: true}}],\n"
+            f"  points: [{{{POINT}, group: 1}}]",
+        ),
+        "s.yaml, line 5: scattering.points[0].group: found 1; there is no such group; allowed: no "
+        "such key, or the number (from 0) of a drawn group in scattering.random",
+    ),
+    "group without groups": (
+        points(f"{{{POINT}, group: 0}}"),
+        "s.yaml, line 3: scattering.points[0].group: found 0; there is no such group; allowed: no",
+    ),
+    "group not drawn": (
+        part(
+            "scattering",
+            f"random: [{{count: 1, transmission: 1}}], points: [{{{POINT}, group: 0}}]",
+        ),
+        "scattering.points[0].group: found 0; scattering.random[0] is not drawn; allowed: no such",
+    ),
     "count too large": (
         part("scattering", "random: [{count: 10001, transmission: 1}]"),
         "random[0].count: found 10001; allowed: an integer in 0..10000",
@@ -567,6 +678,37 @@ FAULTS = {
     "wavenumber without cross-section": (
         part("channel", "dimension: 3, fermi_wavenumber_per_nm: 5"),
         "found 5; the cross-section is missing; allowed: together with width_nm and height_nm",
+    ),
+    "wavenumber that gives no mode": (
+        part("channel", "\n  dimension: 2, width_nm: 1e-200, fermi_wavenumber_per_nm: 1e-200"),
+        "s.yaml, line 2: channel.fermi_wavenumber_per_nm: found 1e-200; with the sides of the "
+        "channel it gives 0 modes; allowed: what gives a finite number of modes > 0",
+    ),
+    "wavenumber that gives too many modes": (
+        part("channel", "dimension: 3, width_nm: 1, height_nm: 1, fermi_wavenumber_per_nm: 1e+200"),
+        "fermi_wavenumber_per_nm: found 1e+200; with the sides of the channel it gives inf modes",
+    ),
+    "bulk resistivity": (
+        part("channel", "dimension: 3, bulk_resistivity_uohm_cm: 0"),
+        f"s.yaml, line 1: channel.bulk_resistivity_uohm_cm: found 0; allowed: {NUMBER}",
+    ),
+    "bulk resistivity in d = 1": (
+        part("channel", "\n  bulk_resistivity_uohm_cm: 2"),
+        "s.yaml, line 2: channel.bulk_resistivity_uohm_cm: found 2; in d = 1 there is no "
+        "cross-section; allowed: for d = 3 only",
+    ),
+    "bulk resistivity in d = 2": (
+        part("channel", "dimension: 2, width_nm: 9, bulk_resistivity_uohm_cm: 2"),
+        "channel.bulk_resistivity_uohm_cm: found 2; in d = 2 the resistivity is that of a sheet, "
+        "in ohm; allowed: for d = 3 only",
+    ),
+    "path called walls": (
+        with_parts(
+            channel="{length_nm: 9, dimension: 2, width_nm: 9}",
+            scattering="{mean_free_path_nm: [{name: walls, mean_free_path_nm: 1}]}",
+        ),
+        "s.yaml, line 3: scattering.mean_free_path_nm[0].name: found 'walls' (text); with "
+        "channel.width_nm this is the name of a part of the resistance; allowed: another name",
     ),
     "specularity in d = 1": (
         part("channel", "specularity: 0.5"),
@@ -682,6 +824,13 @@ FAULTS = {
         "scattering.sections[0].backscatter_path_nm[1].name: found 'bath' (text); with relaxation",
     ),
     # Simulation.
+    **{
+        f"trajectories {value}": (
+            part("simulation", f"\n  trajectories: {value}"),
+            f"s.yaml, line 4: simulation.trajectories: found {value}; allowed: an integer in 0..50",
+        )
+        for value in ("-1", "51", "2.5", "true")
+    },
     "heat share without relaxation": (
         part("simulation", "heat_share_error: 0.1"),
         "simulation.heat_share_error: found 0.1; no mechanism gives heat to the lattice; allowed: "
@@ -739,21 +888,13 @@ FAULTS = {
         "(simulation.batches)",
     ),
     # What later versions bring.
-    "d = 2": (
-        part("channel", "dimension: 2, width_nm: 10, specularity: 0.5"),
-        "s.yaml, line 1: channel.dimension: found 2; this version computes d = 1 only; allowed: 1",
-    ),
-    "d = 3": (
-        part(
-            "channel",
-            "dimension: 3, width_nm: 1, height_nm: 2, specularity: {width: 0}, "
-            "fermi_wavenumber_per_nm: 3",
-        ),
-        "channel.dimension: found 3; this version computes d = 1 only; allowed: 1",
-    ),
     "noise": (
         with_parts(noise="true"),
         "noise: found true; this version does not compute noise; allowed: false",
+    ),
+    "noise in d = 2": (
+        with_parts(channel="{length_nm: 9, dimension: 2}", noise="true"),
+        "s.yaml, line 3: noise: found true; this version does not compute noise; allowed: false",
     ),
     "fano error": (
         part("simulation", "fano_error: 0.1"),
@@ -761,7 +902,7 @@ FAULTS = {
     ),
 }
 
-LATER = {"d = 2", "d = 3", "noise", "fano error"}
+LATER = {"noise", "noise in d = 2", "fano error"}
 
 
 @pytest.mark.parametrize("name", FAULTS)
@@ -860,6 +1001,36 @@ def test_error_survives_pickling():
         part("simulation", "disorder_seed: null, seed: 123456789012345678901234567890"),
         part("channel", "specularity: 1, dimension: 1.0"),
         part("channel", "specularity: {width: 1, height: 1}"),
+        part("channel", "dimension: 2, width_nm: 10, specularity: 0.5"),
+        part("channel", "dimension: 2, modes: 30"),
+        part("channel", "dimension: 2, width_nm: 10, fermi_wavenumber_per_nm: 0.7"),
+        part("channel", "dimension: 2, modes: {energy_meV: [0, 1], value: [1, 2]}"),
+        part("channel", "dimension: 3, bulk_resistivity_uohm_cm: 1.7"),
+        part(
+            "channel",
+            "dimension: 3, width_nm: 1, height_nm: 2, specularity: {width: 0}, "
+            "fermi_wavenumber_per_nm: 3, bulk_resistivity_uohm_cm: 1.7",
+        ),
+        with_parts(
+            channel="{length_nm: 200, dimension: 3}",
+            contacts="{bias_mV: 1, temperature_K: 4, left: {transmission: 0.5, angular: tunnel}}",
+            scattering=f"{{points: [{{{POINT}, angular: tunnel, reflection: diffuse}}], random: "
+            "[{count: 2, transmission: 0.5, angular: tunnel, reflection: diffuse}], "
+            "mean_free_path_nm: {energy_meV: [0, 1], value: [1, 2]}}",
+        ),
+        # Without walls, and without relaxation, these names are free.
+        with_parts(
+            channel="{length_nm: 9, dimension: 2}",
+            scattering="{mean_free_path_nm: [{name: walls, mean_free_path_nm: 1}, "
+            "{name: bath, mean_free_path_nm: 1}]}",
+        ),
+        part(
+            "scattering",
+            "random: [{count: 9, transmission: 1, drawn: true}, {count: 9, transmission: 1}], "
+            f"points: [{{{POINT}, group: 0}}, {{position_nm: 1, transmission: 1, group: null}}]",
+        ),
+        part("simulation", "trajectories: 0"),
+        part("simulation", "trajectories: 50"),
         part("relaxation", "bath_temperature_K: 0"),
         relaxing(
             "{kind: bath, path_nm: 1, direction: randomised}, {kind: carriers, path_nm: 1e9}, "
@@ -928,10 +1099,13 @@ VALUES = st.recursive(
 )
 
 
-@given(st.dictionaries(st.sampled_from(SCENARIO_KEYS), VALUES, min_size=1, max_size=4))
-def test_whatever_is_set_gives_a_scenario_or_faults_that_can_be_told(changes):
+@given(
+    st.sampled_from([FULL, SPACE]),
+    st.dictionaries(st.sampled_from(SCENARIO_KEYS), VALUES, min_size=1, max_size=4),
+)
+def test_whatever_is_set_gives_a_scenario_or_faults_that_can_be_told(text, changes):
     changes = {key.replace("[]", "[0]"): value for key, value in changes.items()}
-    scenario = read_text(FULL)
+    scenario = read_text(text)
     try:
         changed = scenario.replace(changes)
     except ScenarioError as error:
@@ -975,12 +1149,14 @@ simulation:
   seed: 1
   cells: 200
   batches: 64
+  trajectories: 6
 """
     )
 
 
-def test_round_trip_of_every_key():
-    scenario = read_text(FULL)
+@pytest.mark.parametrize("text", [FULL, SPACE])
+def test_round_trip_of_every_key(text):
+    scenario = read_text(text)
     assert read_text(to_yaml(scenario)) == scenario
     assert to_yaml(read_text(to_yaml(scenario))) == to_yaml(scenario)
 
@@ -1104,7 +1280,8 @@ def test_replace_takes_parts_of_scenarios():
             {"scattering.mean_free_path_nm": 5},
             "scattering.backscatter_path_nm: found a list of 2 entries; mean_free_path_nm is given",
         ),
-        ({"channel.dimension": 2}, "this version computes d = 1 only"),
+        ({"noise": True}, "this version does not compute noise"),
+        ({"channel.bulk_resistivity_uohm_cm": 2}, "in d = 1 there is no cross-section"),
         ({"points[-1].a": 1}, "points[-1].a: not a key path; allowed: for example scattering.poi"),
         ({"channel..length_nm": 1}, "channel..length_nm: not a key path"),
         ({"": 1}, "not a key path"),
@@ -1196,8 +1373,8 @@ def test_import_is_light():
 @pytest.mark.parametrize("asked", ["", "energy_bins: 333"])
 def test_bins_and_cells_are_counted_as_the_run_does(phonons, asked):
     """The limit on memory is of no use if it counts something else."""
-    from carriersim.checks import _cuts, _energy_bins
     from carriersim.engine.problem import build
+    from carriersim.memory_check import cuts, energy_bins
     from carriersim.yamlfile import read
 
     text = relaxing(
@@ -1209,8 +1386,8 @@ def test_bins_and_cells_are_counted_as_the_run_does(phonons, asked):
         simulation=f"{{{asked}}}",
     )
     problem, (document, _) = build(read_text(text)), read(text, "s.yaml")
-    assert _energy_bins(document)[0] == problem.relaxed.axis.bins
-    assert 200 <= problem.cells <= 200 + _cuts(document)
+    assert energy_bins(document)[0] == problem.relaxed.axis.bins
+    assert 200 <= problem.cells <= 200 + cuts(document)
 
 
 def test_a_check_needs_no_compiled_code():

@@ -276,7 +276,7 @@ def same_filling(result, values, temperature_K):
 
 
 def _modes(scenario, energy):
-    modes = scenario.channel.modes
+    modes = scenario.channel.resolved_modes
     if hasattr(modes, "energy_meV"):
         return np.interp(energy, modes.energy_meV, modes.value)
     return np.ones_like(energy)

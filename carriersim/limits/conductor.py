@@ -90,7 +90,7 @@ class Conductor:
 
     @property
     def modes_are_constant(self):
-        return not isinstance(self.scenario.channel.modes, EnergyTable)
+        return not isinstance(self.scenario.channel.resolved_modes, EnergyTable)
 
     @property
     def depends_on_energy(self):
@@ -101,12 +101,12 @@ class Conductor:
         """Energies at which M(E) or T(E) has a kink."""
         entries = [law.energy_meV for law in self.laws]
         if not self.modes_are_constant:
-            entries.append(self.scenario.channel.modes.energy_meV)
+            entries.append(self.scenario.channel.resolved_modes.energy_meV)
         return np.concatenate(entries)
 
     def modes(self, energy_meV):
         """M(E), shape of energy_meV."""
-        modes = self.scenario.channel.modes
+        modes = self.scenario.channel.resolved_modes
         if self.modes_are_constant:
             return np.full(np.shape(energy_meV), float(modes))
         return np.interp(energy_meV, modes.energy_meV, modes.value)
@@ -151,7 +151,7 @@ def read(scenario):
     """The Conductor of a scenario's elastic scattering; a Conductor is given back as it is."""
     if isinstance(scenario, Conductor):
         return scenario
-    if scenario.scattering.random:
+    if scenario.scattering.undrawn:
         raise ValueError("closed forms need the random scatterers drawn, as explicit points")
     laws = {Law(): 0}
     contacts, length_nm = scenario.contacts, scenario.channel.length_nm

@@ -15,7 +15,7 @@ def mean_modes(scenario):
     """
     conductor = read(scenario)
     if conductor.modes_are_constant:
-        return float(conductor.scenario.channel.modes)
+        return float(conductor.scenario.channel.resolved_modes)
     if conductor.bias_mV == 0.0 or conductor.same_temperature:
         return float(main_drive(conductor).weight.sum()) / (conductor.bias_mV or 1.0)
     return float(slope_drive(conductor, 0.0, conductor.right_K).weight.sum())

@@ -152,6 +152,6 @@ def _saturation(conductor):
     if paths < max(FEWEST_PATHS, PATHS_PER_STEP * abs(bias) / phonon_meV):
         return
     channel = conductor.scenario.channel
-    size = saturation_current_A(phonon_meV, float(channel.modes), channel.degeneracy)
+    size = saturation_current_A(phonon_meV, float(channel.resolved_modes), channel.degeneracy)
     name, quantity = "saturation current at the phonon energy", "current_A"
     yield of_result(name, quantity, copysign(float(size), bias), SATURATION, "approximate")
