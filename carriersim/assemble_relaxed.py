@@ -9,6 +9,7 @@ from carriersim.engine.observe_relaxed import (
     batches_of,
     noise_bias,
 )
+from carriersim.engine.observe_space import RelaxedSpaceObserver
 from carriersim.estimates import Numbers, common_reasons, field_arrays, make_result
 from carriersim.fermi import mean_occupation
 from carriersim.jackknife import jackknife
@@ -27,7 +28,8 @@ TOO_EARLY = "stopped before three windows of rounds were complete"
 
 def assemble_relaxed(problem, totals, scenario):
     """Result of a finished run with relaxation or coupled probes, without closed forms."""
-    observer = RelaxedObserver(problem, totals.field_sum)
+    kind = RelaxedObserver if problem.space is None else RelaxedSpaceObserver
+    observer = kind(problem, totals.field_sum)
     batches = batches_of(totals)
     value, error = jackknife(observer.scalars, batches | _tangent(totals))
     _widen(problem, observer, totals, value, error)
@@ -43,7 +45,7 @@ def assemble_relaxed(problem, totals, scenario):
         residual=totals.residual,
         drift=totals.drift or None,
         drift_sigma=totals.residual,
-        **_fields(problem, observer, totals, batches),
+        **_fields(problem, observer, totals, batches, numbers),
     )
 
 
@@ -74,18 +76,18 @@ def _widen(problem, observer, totals, value, error):
         error["probe"] = np.maximum(error["probe"], one)
         error["four_point"] = np.maximum(error["four_point"], one * resistance)
     error["jumps"] = np.maximum(error["jumps"], one * resistance)
-    pieces = np.hypot(error["pieces"], _split_error(problem, totals, value["resistance"]))
+    pieces = np.hypot(error["pieces"], _split_error(problem, observer, totals, value["resistance"]))
     error["pieces"] = np.where(scatters, np.maximum(pieces, one * resistance), pieces)
 
 
-def _split_error(problem, totals, resistance):
+def _split_error(problem, observer, totals, resistance):
     """Error of the pieces from the energies of the net flux: the spread over windows."""
     windows = totals.windows
     if len(windows) < 2:
         return 0.0
     sums = {key: array.sum(axis=0) for key, array in batches_of(totals).items()}
     pieces = np.array(
-        [RelaxedObserver(problem, x.field_sum).parts(sums, resistance)["pieces"] for x in windows]
+        [type(observer)(problem, x.field_sum).parts(sums, resistance)["pieces"] for x in windows]
     )
     weight = np.array([float(x.histories.sum()) for x in windows])
     mean = weight @ pieces / weight.sum()
@@ -111,7 +113,7 @@ def _systematic(problem, observer, totals, value):
 
 def _reasons(problem, observer, totals, numbers):
     """Why some quantities are null; keys are those of summary.json."""
-    why = common_reasons(problem.window, numbers)
+    why = common_reasons(problem.scenario.channel, problem.window, numbers)
     why |= {"thermal.conductance_W_per_K": NOT_ALONG, "thermal.seebeck_V_per_K": NO_ROOT}
     if problem.window.linear:
         why |= {key: why["heat_W"] for key in _HEAT_CURRENTS}
@@ -136,10 +138,13 @@ _TEMPERATURES = (
 )
 
 
-def _fields(problem, observer, totals, batches):
+def _fields(problem, observer, totals, batches, numbers):
     """Profiles in every cell and occupations on the output grid, with errors."""
     sums = {key: batches[key] for key in ("histories", "cells", "heat")}
     value, error = jackknife(observer.profiles, sums)
+    if problem.space is not None:
+        value["current_by_direction"] = numbers.value["by_direction"]
+        error["current_by_direction"] = numbers.error["by_direction"]
     n = float(totals.histories.sum())
     mean = totals.field_sum / n
     mean = np.concatenate([mean, mean.mean(axis=0, keepdims=True)])

@@ -26,6 +26,8 @@ ROUNDING = 1e-11  # relative; a smaller standard error is none
 UNEQUAL = "the contacts have different temperatures: a current flows without a bias"
 LINEAR = "bias 0: linear response, quantities per unit of the bias"
 NOT_ASKED = "noise was not asked for"
+NO_DIRECTIONS = "for d = 2 and 3 only"
+NO_WIDTH = "only in two dimensions, where the width is given"
 NOBODY = "no carrier reached the other contact: ask for more histories"
 
 
@@ -75,22 +77,34 @@ def _scaled(estimate, factor):
     )
 
 
-def common_reasons(window, numbers):
+def common_reasons(channel, window, numbers):
     """Why some quantities are null in a run of any kind; keys are those of summary.json."""
     why = {"noise": NOT_ASKED}
+    if channel.dimension == 1:
+        why["long_channel"] = NO_DIRECTIONS
+    if channel.dimension != 2 or channel.width_nm is None:
+        why["resistance_width_ohm_um"] = NO_WIDTH
     if window.linear:
         why |= {"current_A": LINEAR, "heat_W": LINEAR, "lattice_power_W_per_nm": LINEAR}
         if window.same_temperature:
             why["thermal.heat_current_left_W"] = why["thermal.heat_current_right_W"] = LINEAR
     if not window.same_temperature:
-        why |= {"resistance_ohm": UNEQUAL, "breakdown": UNEQUAL, "four_point": UNEQUAL}
+        names = ("resistance_ohm", "resistance_width_ohm_um", "breakdown", "four_point")
+        why |= dict.fromkeys(names, UNEQUAL)
         if not window.linear:
             why["transmission"] = UNEQUAL
     else:
         value, error = numbers.value["resistance"], numbers.error["resistance"]
         if not np.isfinite(value):
             why |= dict.fromkeys(
-                ("resistance_ohm", "differential_resistance_ohm", "breakdown", "four_point"), NOBODY
+                (
+                    "resistance_ohm",
+                    "resistance_width_ohm_um",
+                    "differential_resistance_ohm",
+                    "breakdown",
+                    "four_point",
+                ),
+                NOBODY,
             )
         elif not error < value / FEWEST_SIGMA:
             why["breakdown"] = "the current is below five standard errors: ask for more histories"
@@ -128,6 +142,10 @@ def _quantities(problem, observer, numbers, why):
         "current_A": known("current_A", lambda: numbers.one("current")),
         "conductance_S": numbers.one("conductance"),
         "resistance_ohm": known("resistance_ohm", lambda: numbers.one("resistance")),
+        "resistance_width_ohm_um": known(
+            "resistance_width_ohm_um",
+            lambda: _scaled(numbers.one("resistance"), 1e-3 * scenario.channel.width_nm),
+        ),
         "differential_resistance_ohm": numbers.one("differential"),
         "breakdown": known("breakdown", lambda: _breakdown(problem, observer, numbers)),
         "four_point": known(
@@ -221,6 +239,13 @@ def _without_rounding(pieces, resistance):
 def field_arrays(problem, observer, value, error):
     """The arrays of a Result from its fields and their errors by name."""
     edges = problem.cell_edges_nm
+    if problem.space is not None:
+        space = problem.space
+        angles = np.degrees(np.arccos(space.planes.view_edges))
+        value = value | {
+            "view_nm": problem.nodes_nm[space.view_nodes],
+            "direction_deg": 0.5 * (angles[1:] + angles[:-1]),
+        }
     return value | {
         "x_nm": 0.5 * (edges[1:] + edges[:-1]),
         "cell_edges_nm": edges,

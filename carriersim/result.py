@@ -103,6 +103,37 @@ class Noise:
 
 
 @dataclass(frozen=True)
+class LongChannel:
+    """What an endless channel of the same kind does, d = 2 and 3; None where it has no meaning.
+
+    resistivity_ratio: to the resistivity of bulk scattering alone. method: how it was found.
+    """
+
+    resistivity_ratio: Estimate | None
+    resistivity_uohm_cm: Estimate | None
+    sheet_ohm: Estimate | None
+    backscatter_path_nm: Estimate | None
+    method: str
+
+
+@dataclass(frozen=True)
+class Trajectory:
+    """One carrier's way: places in nm, shape (n, 3), and what happened there, (n,) int64.
+
+    kinds: indices into TRAJECTORY_EVENTS.
+    """
+
+    places_nm: np.ndarray
+    kinds: np.ndarray
+
+
+TRAJECTORY_EVENTS = (
+    "start", "collision", "mirror reflection at a wall", "diffuse reflection at a wall",
+    "passage", "reflection at a plane", "end",
+)  # fmt: skip
+
+
+@dataclass(frozen=True)
 class Result:
     """Everything one run found. A quantity without meaning is None and `why[key]` says why.
 
@@ -152,6 +183,14 @@ class Result:
     departure: np.ndarray
     lattice_power_W_per_nm: np.ndarray
     errors: dict[str, np.ndarray] = field(default_factory=dict)
+    # Two and three dimensions: places, angles to the axis (D,), and (V, 2, D) the current in A per
+    # degree (at bias 0 or unequal temperatures dI/dV in S) of carriers moving right, left.
+    view_nm: np.ndarray | None = None
+    direction_deg: np.ndarray | None = None
+    current_by_direction: np.ndarray | None = None
+    resistance_width_ohm_um: Estimate | None = None
+    long_channel: LongChannel | None = None
+    trajectories: tuple[Trajectory, ...] = ()
     drift: str | None = None  # which frozen field drifted most at the end, and where, in words
     drift_sigma: float | None = None  # by how many standard errors
 

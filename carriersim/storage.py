@@ -17,16 +17,21 @@ from carriersim.result import (
     FourPoint,
     Heat,
     LimitRow,
+    LongChannel,
     Noise,
     Part,
     ProbeReading,
     Result,
     Thermal,
+    Trajectory,
 )
 from carriersim.scenario import load, to_yaml
 
 SCENARIO, SUMMARY, FIELDS, PROFILE = "scenario.yaml", "summary.json", "fields.npz", "profile.csv"
-FIGURES = ("profile", "occupation", "resistance", "departure", "temperatures", "heat")
+FIGURES = (
+    "profile", "occupation", "resistance", "departure", "temperatures", "heat", "directions",
+    "trajectories",
+)  # fmt: skip
 OURS = {SCENARIO, SUMMARY, FIELDS, PROFILE}
 OURS |= {f"{name}.{kind}" for name in FIGURES for kind in ("png", "svg")}
 
@@ -41,12 +46,15 @@ CELL_ARRAYS = (
     "departure",
     "lattice_power_W_per_nm",
 )
+DIRECTION_AXES = ("view_nm", "direction_deg")  # only in two and three dimensions, like the next
+DIRECTION_ARRAYS = ("current_by_direction",)
 AXES = ("x_nm", "cell_edges_nm", "energy_meV", "energy_edges_meV")
 ESTIMATES = (
     "transmission",
     "current_A",
     "conductance_S",
     "resistance_ohm",
+    "resistance_width_ohm_um",
     "differential_resistance_ohm",
 )
 COUNTERS = (
@@ -179,9 +187,32 @@ def _write_files(result, work):
     text = json.dumps(summary(result), indent=2, allow_nan=False, ensure_ascii=False)
     (work / SUMMARY).write_text(text + "\n", "utf-8")
     arrays = {name: getattr(result, name) for name in (*AXES, *CELL_ARRAYS, *ENERGY_ARRAYS)}
+    if result.current_by_direction is not None:
+        arrays |= {name: getattr(result, name) for name in (*DIRECTION_AXES, *DIRECTION_ARRAYS)}
     arrays |= {f"{name}_error": value for name, value in result.errors.items()}
+    arrays |= _trajectory_arrays(result.trajectories)
     np.savez(work / FIELDS, **arrays)
     _write_profile(result, work / PROFILE)
+
+
+def _trajectory_arrays(trajectories):
+    """Trajectories one after the other: places, kinds, and the number of places of each."""
+    if not trajectories:
+        return {}
+    return {
+        "trajectory_places_nm": np.concatenate([t.places_nm for t in trajectories]),
+        "trajectory_kinds": np.concatenate([t.kinds for t in trajectories]),
+        "trajectory_sizes": np.array([t.kinds.size for t in trajectories]),
+    }
+
+
+def _read_trajectories(arrays):
+    if "trajectory_sizes" not in arrays:
+        return ()
+    ends = np.cumsum(arrays["trajectory_sizes"])[:-1]
+    places = np.split(arrays["trajectory_places_nm"], ends)
+    kinds = np.split(arrays["trajectory_kinds"], ends)
+    return tuple(Trajectory(p, k) for p, k in zip(places, kinds, strict=True))
 
 
 def _write_profile(result, path):
@@ -236,14 +267,13 @@ def summary(result):
     data["probes"] = [
         {"position_nm": p.position_nm, "potential_mV": _plain(p.potential)} for p in result.probes
     ]
-    for name in ("heat_W", "thermal", "noise"):
+    for name in ("heat_W", "thermal", "noise", "long_channel"):
         group = getattr(result, name)
         data[name] = (
             None if group is None else {key: _plain(value) for key, value in vars(group).items()}
         )
-    data["long_channel"] = None
     data["limits"] = [asdict(row) for row in result.limits]
-    data["why"] = {"long_channel": "for d = 2 and 3 only"} | result.why
+    data["why"] = result.why
     return data
 
 
@@ -277,7 +307,7 @@ def open_result(directory):
         version=data["version"],
         linear_response=data["linear_response"],
         ballistic_resistance_ohm=data["ballistic_resistance_ohm"],
-        why={k: v for k, v in data["why"].items() if k != "long_channel"},
+        why=data["why"],
         breakdown=_read_list(data["breakdown"], _read_part),
         four_point=_read_list(
             data["four_point"],
@@ -291,7 +321,14 @@ def open_result(directory):
         thermal=_read_group(Thermal, data["thermal"]),
         noise=_read_group(Noise, data["noise"]),
         limits=tuple(LimitRow(**row) for row in data["limits"]),
-        errors={name: arrays[f"{name}_error"] for name in (*CELL_ARRAYS, *ENERGY_ARRAYS)},
+        long_channel=_read_group(LongChannel, data["long_channel"]),
+        errors={
+            name: arrays[f"{name}_error"]
+            for name in (*CELL_ARRAYS, *ENERGY_ARRAYS, *DIRECTION_ARRAYS)
+            if f"{name}_error" in arrays
+        },
+        trajectories=_read_trajectories(arrays),
+        **{n: arrays[n] for n in (*DIRECTION_AXES, *DIRECTION_ARRAYS) if n in arrays},
         **{name: data[name] for name in COUNTERS},
         **{name: _read_estimate(data[name]) for name in ESTIMATES},
         **{name: arrays[name] for name in names},
@@ -299,7 +336,7 @@ def open_result(directory):
 
 
 def _read_estimate(data):
-    return None if data is None else Estimate(**data)
+    return Estimate(**data) if isinstance(data, dict) else data
 
 
 def _read_list(data, read):

@@ -155,7 +155,7 @@ def test_summary(results, kind, tmp_path):
 def test_null_exactly_where_there_is_no_meaning(results):
     nulls = {
         kind: {key for key, value in storage.summary(results(kind)).items() if value is None}
-        - {"noise", "residual", "drift", "drift_sigma", "long_channel"}
+        - {"noise", "residual", "drift", "drift_sigma", "long_channel", "resistance_width_ohm_um"}
         for kind in KINDS
     }
     linear = {"current_A", "heat_W"}

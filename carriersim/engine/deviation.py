@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from carriersim.constants import BOLTZMANN_MEV_PER_K
-from carriersim.engine import wander as w
+from carriersim.engine import sources as w
 from carriersim.engine.mechanisms import (
     FINE,
     KEPT_CARRIERS,
@@ -117,7 +117,8 @@ class FromReference:
     def by_carriers(self, difference):
         """Pairs that carriers events emit in each cell for a difference of k T_e, (3, C)."""
         rates = self.problem.relaxed.mechanisms.rates
-        result = difference * np.log(2.0) * self.widths
+        oblique = 1.0 if self.problem.space is None else self.problem.space.oblique
+        result = difference * np.log(2.0) * self.widths * oblique
         result[:2] *= rates[KEPT_CARRIERS]
         result[2] *= 2.0 * rates[RANDOM_CARRIERS]
         return result
@@ -141,7 +142,7 @@ class FromTrial(FromReference):
 
     def emitters(self, warmer):
         strength = np.zeros(w.SOURCES)
-        strength[w.TRIAL_INSIDE], strength[w.TRIAL_NODE] = self.emitted
+        strength[w.TRIAL_INSIDE], strength[w.TRIAL_NODE], strength[w.TRIAL_WALL] = self.emitted
         return self.warm(strength, warmer)
 
 

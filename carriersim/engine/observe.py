@@ -24,9 +24,7 @@ class Observer:
         self.degeneracy = problem.scenario.channel.degeneracy
         self.jumps = problem.is_scatterer
         self.full = 1.0 if self.window.linear else self.window.mu_left_meV
-        f = problem.functionals
-        at_bias = self.window.same_temperature and not self.window.linear
-        self.drive = f.current if at_bias else f.bias_slope
+        self.drive = problem.functionals.transport(self.window)
         self.ballistic_ohm = ballistic_ohm(problem)
         # The output grid; with several bins it is the run's own, each cut into `finer` parts.
         self.finer = 1

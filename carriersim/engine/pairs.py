@@ -17,8 +17,11 @@ def no_pairs():
     }
 
 
-def phonon_pairs(deviation, phonons, axis, widths_nm):
-    """Source of pairs, - e_upper e_lower / (2 path) in the lower state, as a list to draw from."""
+def phonon_pairs(deviation, phonons, axis, paths_nm):
+    """Source of pairs, - e_upper e_lower / (2 path) in the lower state, as a list to draw from.
+
+    deviation: (2, B, C) means over half spaces; paths_nm: (C,) lengths of flights across each cell.
+    """
     strengths, places, bins, kinds, which = [], [], [], [], []
     for k, energy in enumerate(phonons.phonon_meV):
         whole, shift = phonon_shift(energy, axis.step_meV)
@@ -30,7 +33,7 @@ def phonon_pairs(deviation, phonons, axis, widths_nm):
             for upper in (0, 1):
                 for lower in (0, 1):
                     product = -deviation[upper, above:] * deviation[lower, : axis.bins - above]
-                    strength = product * (0.5 * phonons.phonon_rate[k] * part * widths_nm)
+                    strength = product * (0.5 * phonons.phonon_rate[k] * part * paths_nm)
                     bin_, cell = np.nonzero(strength)
                     value = strength[bin_, cell]
                     strengths.append(np.abs(value))

@@ -23,7 +23,8 @@ from carriersim.engine.mechanisms import (
     probes_of,
     reference,
 )
-from carriersim.engine.wander import Setting
+from carriersim.engine.sources import Setting
+from carriersim.engine.space import BACKSCATTER, Space, space_of
 from carriersim.quantities import EnergyTable
 
 LEAST_SPREAD = 0.15  # of the greatest, 1/2 at T = 1/2: rare outcomes need histories to show at all
@@ -55,6 +56,12 @@ class Functionals:
     energy: np.ndarray | None  # E (F_L - F_R) [meV^2]; None where modes depend on energy
     thermal: tuple[np.ndarray, np.ndarray, np.ndarray]  # M E^n (-dF/dE), n = 0, 1, 2
     mean_modes: float  # averaged over the energies that carry the current
+
+    def transport(self, window):
+        """What the run is about: the current, or its slope at bias 0 and unequal temperatures."""
+        if window.same_temperature and not window.linear:
+            return self.current
+        return self.bias_slope
 
 
 @dataclass(frozen=True)
@@ -90,6 +97,7 @@ class Problem:
     probe_node: np.ndarray  # (probes,) int64
     transparent: bool  # nothing can turn a carrier back
     relaxed: Relaxed | None = None  # what relaxation and coupled probes need; None without them
+    space: Space | None = None  # planes and walls in d = 2, 3
 
     @property
     def cells(self):
@@ -109,7 +117,7 @@ def at_energy(value, energy_meV):
 
 def modes_at(scenario, energy_meV):
     """M at the given energies."""
-    return at_energy(scenario.channel.modes, energy_meV)
+    return at_energy(scenario.channel.resolved_modes, energy_meV)
 
 
 def build(scenario):
@@ -117,12 +125,14 @@ def build(scenario):
     window = Window(
         scenario.contacts.bias_mV, scenario.left_temperature_K, scenario.right_temperature_K
     )
-    nodes, transmissions = _nodes(scenario)
+    nodes, transmissions, planes = _nodes(scenario)
     paths = [_paths_at(scenario, 0.5 * (a + b)) for a, b in pairwise(nodes)]
+    flown = _flown(paths, scenario.channel.dimension)
+    space = space_of(scenario, nodes, planes, _view_places(scenario))
     length = np.diff(nodes)
     cells = np.maximum(1, np.rint(length / nodes[-1] * scenario.simulation.cells)).astype(np.int64)
     edges = [np.linspace(a, b, n + 1)[1:] for (a, b), n in zip(pairwise(nodes), cells, strict=True)]
-    constant = np.array([sum(1 / p.value for p in row if not _varies(p.value)) for row in paths])
+    constant = np.array([sum(1 / p.value for p in row if not _varies(p.value)) for row in flown])
     geometry = Geometry(
         length_nm=length,
         thickness=length * constant,
@@ -130,20 +140,20 @@ def build(scenario):
         cells=cells,
         transmission=np.array([1.0 if _varies(t) else float(t) for t in transmissions]),
     )
-    tables = _distinct([*transmissions, *(p.value for row in paths for p in row)])
-    modes = scenario.channel.modes
+    tables = _distinct([*transmissions, *(p.value for row in flown for p in row)])
+    modes = scenario.channel.resolved_modes
     mode_tables = [modes] if _varies(modes) else []
     bins = spectrum = relaxed = None
     share = np.ones(1)
     if needs_relaxation(scenario):
-        relaxed = _relaxed(scenario, window, nodes, transmissions, paths, tables)
+        relaxed = _relaxed(scenario, window, nodes, transmissions, flown, tables)
         functionals = _constant_functionals(float(modes), window)
     elif tables or mode_tables:
         edges_meV = axis(window, [*tables, *mode_tables], scenario.simulation.energy_bins)
         bins = Bins(edges_meV, window.breaks())
         functionals = _binned_functionals(scenario, window, bins)
         share = _share(bins, functionals, window, _spread(bins, transmissions, paths, length))
-        spectrum = _spectrum(bins, share, transmissions, paths, tables)
+        spectrum = _spectrum(bins, share, transmissions, flown, tables)
     else:
         functionals = _constant_functionals(float(modes), window)
     return Problem(
@@ -160,8 +170,11 @@ def build(scenario):
         is_scatterer=np.array([_varies(t) or t < 1.0 for t in transmissions]),
         is_section_edge=np.isin(nodes, _section_edges(scenario)),
         probe_node=np.searchsorted(nodes, [p.position_nm for p in scenario.probes]),
-        transparent=not any(paths) and all(not _varies(t) and t == 1.0 for t in transmissions),
+        transparent=not any(paths)
+        and all(not _varies(t) and t == 1.0 for t in transmissions)
+        and (space is None or not space.scatters),
         relaxed=relaxed,
+        space=space,
     )
 
 
@@ -249,43 +262,69 @@ def _section_edges(scenario):
 
 
 def _nodes(scenario):
-    """Positions of all nodes, increasing, and the transmission of each."""
+    """Positions of all nodes, increasing; transmission, (angular, reflection) of each."""
     length = scenario.channel.length_nm
     contacts = scenario.contacts
-    by_place = {p.position_nm: p.transmission for p in scenario.scattering.points}
-    for place in [*_section_edges(scenario), *(p.position_nm for p in scenario.probes)]:
-        by_place.setdefault(place, 1.0)
+    by_place = {p.position_nm: p for p in scenario.scattering.points}
+    inner = [*_section_edges(scenario), *(p.position_nm for p in scenario.probes)]
+    for place in [*inner, *_view_places(scenario)]:
+        if 0.0 < place < length:
+            by_place.setdefault(place, None)
     places = sorted(by_place)
-    nodes = np.array([0.0, *places, length])
-    inner = [by_place[place] for place in places]
-    return nodes, [contacts.left.transmission, *inner, contacts.right.transmission]
+    planes = [contacts.left, *(by_place[place] for place in places), contacts.right]
+    return (
+        np.array([0.0, *places, length]),
+        [1.0 if plane is None else plane.transmission for plane in planes],
+        [
+            ("constant", "specular") if plane is None else (plane.angular, plane.reflection)
+            for plane in planes
+        ],
+    )
+
+
+def _view_places(scenario):
+    """Where the angular distribution is looked at: the contacts, and the probes or the middle."""
+    length = scenario.channel.length_nm
+    if scenario.channel.dimension == 1:
+        return []
+    return [0.0, *([p.position_nm for p in scenario.probes] or [0.5 * length]), length]
 
 
 def _paths_at(scenario, place_nm):
-    """The backscattering paths in force at a place, lam = 2 l in one dimension."""
+    """The backscattering paths in force at a place."""
     level = scenario.scattering
     for section in scenario.scattering.sections:
         if section.from_nm <= place_nm <= section.to_nm:
             level = section
-    return backscatter_paths(level)
+    return backscatter_paths(level, scenario.channel.dimension)
 
 
-def backscatter_paths(level):
+def backscatter_paths(level, dimension=1):
     """Paths of one level (the whole channel, a section): a list of Path, empty = ballistic."""
     named = level.backscatter_path_nm
+    free = BACKSCATTER[dimension]  # of a mean free path
     factor = 1.0
     if named is None:
-        named, factor = level.mean_free_path_nm, 2.0
+        named, factor = level.mean_free_path_nm, free
     if named is None:
         return []
     if isinstance(named, tuple):
         return [
-            Path(item.name, _scaled(item.mean_free_path_nm, 2.0))
+            Path(item.name, _scaled(item.mean_free_path_nm, free))
             if item.backscatter_path_nm is None
             else Path(item.name, item.backscatter_path_nm)
             for item in named
         ]
     return [Path("elastic", _scaled(named, factor))]
+
+
+def _flown(paths, dimension):
+    """The paths that flights of the kernel take: mean free paths where there are directions."""
+    if dimension == 1:
+        return paths
+    return [
+        [Path(p.name, _scaled(p.value, 1.0 / BACKSCATTER[dimension])) for p in row] for row in paths
+    ]
 
 
 def _scaled(value, factor):
@@ -356,7 +395,7 @@ def _binned_functionals(scenario, window, bins):
     left = window.mu_left_meV, window.temperature_left_K
     current = bins.functional(lambda e: modes(e) * window.difference(e))
     slope = bins.slope_functional(*left, modes)
-    constant = scenario.channel.modes
+    constant = scenario.channel.resolved_modes
     if not _varies(constant):
         # The axis ends at REACH_KT: what lies beyond (some 1e-9) is known here, so it is put back.
         slope *= constant / slope.sum()
@@ -376,9 +415,7 @@ def _binned_functionals(scenario, window, bins):
         heat=bins.functional(lambda e: e * modes(e) * window.difference(e)),
         filling=filling,
         number=bins.functional(window.difference),
-        energy=None
-        if _varies(scenario.channel.modes)
-        else bins.functional(lambda e: e * window.difference(e)),
+        energy=None if _varies(constant) else bins.functional(lambda e: e * window.difference(e)),
         thermal=tuple(
             bins.slope_functional(0.0, window.mean_temperature_K, modes, power=n) for n in range(3)
         ),

@@ -7,12 +7,14 @@ import numpy as np
 from joblib import delayed
 from numba import njit
 
+from carriersim.engine import sources as w
 from carriersim.engine import streams
-from carriersim.engine import wander as w
+from carriersim.engine.directions import new_ray_stream
 from carriersim.engine.flights import DONE
 from carriersim.engine.pairs import no_pairs, phonon_pairs
 from carriersim.engine.residual import cumulative
 from carriersim.engine.solve import EVENT_LIMIT, chunks, new_stream, offset_of, several
+from carriersim.engine.wander import wander
 
 FIRST_SIZE = 96  # histories of each batch in the rounds of the first window, at least
 FEW_EVENTS, MOST_FACTOR = 4.0, 16.0  # more of them, up to this factor, when more events feed back
@@ -22,6 +24,8 @@ TRUST = 3.0  # rounds that a trial occupation counts for
 GROUPS = 16
 MOST_PAIRS = 0.5  # strength of the pair source, over that of the residual
 BLOCK_PATHS = 0.4  # of the phonons' path: frozen occupations are averaged over such blocks
+RAY_SUMS = ("densities", "lost", "views")  # only where carriers have directions
+NO_SHAPES = (0, 4), (0,), (0, 2, 0)
 SUMS = ("current", "energy", "arrivals", "departures", "cells", "heat", "probe_heat", "turned")
 
 
@@ -57,10 +61,17 @@ def first_size(problem):
     return int(FIRST_SIZE * min(max(events / FEW_EVENTS, 1.0), MOST_FACTOR))
 
 
+def sums_of(problem):
+    """Names of what is added up."""
+    return SUMS if problem.space is None else SUMS + RAY_SUMS
+
+
 def empty_window(problem, batches):
     shape = (2, problem.relaxed.axis.bins, problem.cells)
     groups = np.zeros((min(GROUPS, batches), *shape), np.float32)
-    return Window(np.zeros(batches, np.int64), {key: 0.0 for key in SUMS}, np.zeros(shape), groups)
+    return Window(
+        np.zeros(batches, np.int64), {key: 0.0 for key in sums_of(problem)}, np.zeros(shape), groups
+    )
 
 
 def empty_tally(problem):
@@ -75,7 +86,16 @@ def empty_tally(problem):
         probe_heat=np.zeros(nodes),
         turned=np.zeros(cells),
         scalars=np.zeros(4),
+        **_direction_tallies(problem),
     )
+
+
+def _direction_tallies(problem):
+    nodes, space = problem.nodes_nm.size, problem.space
+    if space is None:
+        return {key: np.zeros(shape) for key, shape in zip(RAY_SUMS, NO_SHAPES, strict=True)}
+    shapes = (nodes, 4), (nodes - 1,), (space.view_nodes.size, 2, space.classes)
+    return {key: np.zeros(shape) for key, shape in zip(RAY_SUMS, shapes, strict=True)}
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -120,13 +140,18 @@ class Rounds:
         simulation = problem.scenario.simulation
         self.batches = simulation.batches
         purpose = streams.TANGENT if deviation.tangent else streams.TRANSPORT
-        self.streams = [new_stream(simulation.seed, b, purpose) for b in range(self.batches)]
+        new = new_stream if problem.space is None else new_ray_stream
+        self.streams = [new(simulation.seed, b, purpose) for b in range(self.batches)]
         self.offsets = [offset_of(simulation.seed, b) for b in range(self.batches)]
         self.done = np.zeros(self.batches, np.int64)
         self.setting = self.relaxed.setting
         if deviation.tangent:
             self.setting = self.setting._replace(tangent=True, left_sign=1.0)
         self.widths = np.diff(problem.cell_edges_nm)
+        self.oblique = 1.0 if problem.space is None else problem.space.oblique
+        self.met = (None, None, None)  # planes and two pairs of walls
+        if problem.space is not None:
+            self.met = (problem.space.planes, *problem.space.walls)
         self.fields = Fields(
             np.zeros((self.batches, problem.cells, 2, 3)),
             np.zeros((self.batches, problem.nodes_nm.size)),
@@ -146,7 +171,9 @@ class Rounds:
         phonons = self.relaxed.mechanisms
         if self.deviation.part and phonons.phonon_meV.size:
             lacking = self.coarse(self.fields.occupation - self.deviation.part["field"])
-            pairs, strength = phonon_pairs(lacking, phonons, self.relaxed.axis, self.widths)
+            pairs, strength = phonon_pairs(
+                lacking, phonons, self.relaxed.axis, self.widths * self.oblique
+            )
             # Beyond this share it is noise squared, which would breed; what the trial occupation
             # really lacks is a thousandth, and its square nothing.
             if strength <= MOST_PAIRS * sum(self.deviation.emitted):
@@ -189,17 +216,17 @@ class Rounds:
         sources, total = self.sources(warmer)
         tally = empty_tally(self.problem)
         relaxed = self.relaxed
-        status = w.wander(
+        status = wander(
             int(self.done[batch]), histories, self.offsets[batch], self.problem.geometry,
-            relaxed.tables, self.deviation.mechanisms, relaxed.probes, frozen, self.deviation.trial,
-            sources,
-            self.setting, self.streams[batch], tally, self.stop.flag, EVENT_LIMIT,
+            *self.met, relaxed.tables, self.deviation.mechanisms, relaxed.probes, frozen,
+            self.deviation.trial, sources, self.setting, self.streams[batch], tally,
+            self.stop.flag, EVENT_LIMIT,
         )  # fmt: skip
         if status != DONE:
             return None
         scale = total / max(histories, 1)
         field_ = np.empty((2, relaxed.axis.bins, self.problem.cells))
-        spread_bins(tally.bins, scale / relaxed.axis.step_meV, field_)
+        spread_bins(tally.bins, scale / self.oblique / relaxed.axis.step_meV, field_)
         scalars = tally.scalars
         values = {
             "flights": int(scalars[w.FLIGHTS]),
@@ -209,11 +236,17 @@ class Rounds:
             "energy": scale * np.array([scalars[w.ENERGY_LEFT], scalars[w.ENERGY_RIGHT]]),
             "arrivals": scale * tally.arrivals,
             "departures": scale * tally.departures,
-            "cells": scale * self.lengths(tally.cells),
+            "cells": scale / self.oblique * self.lengths(tally.cells),
             "heat": scale * tally.heat,
             "probe_heat": scale * tally.probe_heat,
             "turned": scale * tally.turned,
         }
+        if self.problem.space is not None:
+            values |= {
+                "densities": scale / self.oblique * tally.densities,
+                "lost": scale * tally.lost,
+                "views": scale * tally.views,
+            }
         for key, value in self.deviation.part.items():
             values[key] = values[key] + value
         return values
@@ -251,11 +284,12 @@ class Rounds:
             return None
         self.done += size
         self.strength = max(r["strength"] for r in kept)
-        values = {key: np.array([r[key] for r in kept]) for key in SUMS}
+        sums = sums_of(self.problem)
+        values = {key: np.array([r[key] for r in kept]) for key in sums}
         histories = size * self.batches
         window.noise += self.fields.noise() * histories if self.fields.weight else 0.0
         window.histories = window.histories + size
-        for key in SUMS:
+        for key in sums:
             window.sums[key] = window.sums[key] + size * values[key]
         window.field_sum += field_sum
         return sum(r["flights"] for r in kept), values, field_sum / histories

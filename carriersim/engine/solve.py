@@ -6,13 +6,14 @@ fixed order. So the result depends on the seed, not on the number of workers.
 """
 
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import chain
 
 import numpy as np
 from joblib import Parallel, delayed
 
-from carriersim.engine import flights, streams, tallies
+from carriersim.engine import flights, ray_tallies, rays, streams, tallies
+from carriersim.engine.directions import new_ray_stream
 
 FIRST_ROUND = 16  # histories of each batch in the first round
 FIRST_ROUND_BINNED = 160  # the same with several energies, where adding up a round costs more
@@ -70,6 +71,8 @@ class Totals:
     field_sum: np.ndarray | None = None
     field_square: np.ndarray | None = None
     samples: int = 0
+    rays: dict = field(default_factory=dict)  # sums of Sample.rays, leading axis = batches
+    trouble: str = ""  # which carrier went on for ever, and where
 
     @property
     def all_histories(self):
@@ -85,7 +88,8 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
     """
     stop = stop or StopRequest()
     simulation = problem.scenario.simulation
-    batches = [new_stream(simulation.seed, b) for b in range(simulation.batches)]
+    new = new_stream if problem.space is None else new_ray_stream
+    batches = [new(simulation.seed, b) for b in range(simulation.batches)]
     offsets = [offset_of(simulation.seed, b) for b in range(simulation.batches)]
     totals = _empty_totals(problem, simulation.batches)
     run = _batch_runner(problem, batches, offsets, stop)
@@ -118,9 +122,7 @@ def relative_error(problem, totals):
 
     inf while too few histories have taken the rarer way to say.
     """
-    weight = problem.functionals.current
-    if problem.window.linear or not problem.window.same_temperature:
-        weight = problem.functionals.bias_slope
+    weight = problem.functionals.transport(problem.window)
     done = totals.histories.sum()
     rarer = min(totals.reached, done - totals.reached)
     if rarer < FEW_EVENTS and done < MANY_HISTORIES and not problem.transparent:
@@ -165,36 +167,60 @@ def _empty_totals(problem, batches):
 
 
 def _batch_runner(problem, batches, offsets, stop):
-    """A function (batch, first, histories) -> Sample, or None if it was stopped."""
+    """A function (batch, first, histories) -> Sample, or words on why it is not whole."""
+    kernel = _kernel(problem)
 
     def run(batch, first, histories):
-        counts = tallies.empty_counts(problem)
-        status = flights.fly(
-            first,
-            histories,
-            offsets[batch],
-            problem.geometry,
-            problem.spectrum,
-            batches[batch],
-            counts,
-            stop.flag,
-            EVENT_LIMIT,
-        )
-        if status != flights.DONE:
-            return None
-        return tallies.reduce(problem, counts, histories)
+        stream = batches[batch]
+        status, counts, sample = kernel(first, histories, offsets[batch], stream, stop.flag)
+        if status == flights.TOO_MANY_EVENTS:
+            return _lost_in(problem, batch, counts)
+        return sample if status == flights.DONE else ""
 
     return run
 
 
+def _kernel(problem):
+    """A function (first, histories, offset, stream, stop flag) -> outcome, counts, Sample."""
+    common = problem.geometry, problem.spectrum
+
+    def one_dimension(first, histories, offset, stream, flag):
+        counts = tallies.empty_counts(problem)
+        setting = first, histories, offset, *common, stream
+        status = flights.fly(*setting, counts, flag, EVENT_LIMIT)
+        done = status == flights.DONE
+        return status, counts, tallies.reduce(problem, counts, histories) if done else None
+
+    def directions(first, histories, offset, stream, flag):
+        counts = ray_tallies.empty_counts(problem)
+        status = rays.cross(
+            first, histories, offset, problem.geometry, space.planes, *space.walls,
+            problem.spectrum, drive, stream, counts, flag, EVENT_LIMIT, None,
+        )  # fmt: skip
+        done = status == flights.DONE
+        return status, counts, ray_tallies.reduce(problem, counts, histories) if done else None
+
+    space = problem.space
+    if space is None:
+        return one_dimension
+    drive = ray_tallies.drive_of(problem)
+    return directions
+
+
+def _lost_in(problem, batch, counts):
+    """Words on a carrier that took more events than one may."""
+    words = f"carrier {counts.work[flights.HISTORY]} of batch {batch}"
+    if problem.space is not None:
+        place = problem.nodes_nm[counts.work[rays.NODE]]
+        words += f", last at the node at {place:g} nm,"
+    return f"{words} took more than {EVENT_LIMIT:.0e} random numbers"
+
+
 def compile_for(problem):
     """Load or compile the variant of the kernels that a problem needs, without a history."""
-    counts = tallies.empty_counts(problem)
-    silent = np.zeros(1, np.uint8)
-    stream = new_stream(0, 0)
-    setting = np.uint64(0), problem.geometry, problem.spectrum, stream
-    flights.fly(0, 0, *setting, counts, silent, EVENT_LIMIT)
-    sample = tallies.reduce(problem, counts, 0)
+    stream = new_stream(0, 0) if problem.space is None else new_ray_stream(0, 0)
+    flag = np.zeros(1, np.uint8)
+    *_, sample = _kernel(problem)(0, 0, np.uint64(0), stream, flag)
     if sample.field is not None:
         sums = np.zeros((3, *sample.field.shape[1:]))
         tallies.add_field(sample.field, 1, sums, sums.copy())
@@ -215,8 +241,9 @@ def _one_round(problem, totals, sizes, run, pool, workers):
         sums = np.zeros_like(totals.field_sum), np.zeros_like(totals.field_square)
     complete = True
     for sample in results:  # in the order of the batches, whoever finished first
-        if sample is None:
+        if isinstance(sample, str):
             complete = False
+            totals.trouble = totals.trouble or sample
         elif complete:
             if sums is not None:
                 tallies.add_field(sample.field, sample.histories, *sums)
@@ -229,6 +256,10 @@ def _one_round(problem, totals, sizes, run, pool, workers):
         totals.transmitted[batch] += sample.transmitted
         totals.arrivals[batch] += sample.arrivals
         totals.cells[batch] += sample.cells
+        for key, value in sample.rays.items():
+            if key not in totals.rays:
+                totals.rays[key] = np.zeros((totals.histories.size, *value.shape))
+            totals.rays[key][batch] += value
         totals.flights += sample.flights
         totals.reached += sample.reached
     if sums is not None:

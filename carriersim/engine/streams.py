@@ -100,7 +100,7 @@ def minus_log(u):
 
 
 @njit(cache=True, inline="always", error_model="numpy")
-def _next_bits(lanes, k):
+def next_bits(lanes, k):
     """One step of lane k. One flat state array: with constant offsets between the four words the
     compiler can prove that lanes are independent, which it can't for four arrays."""
     a = lanes[k]
@@ -120,7 +120,7 @@ def _next_bits(lanes, k):
 
 
 @njit(cache=True, inline="always", error_model="numpy")
-def _one_to_two(bits):
+def one_to_two(bits):
     """Uniform in [1, 2), steps of 2**-52."""
     return _as_double((bits >> np.uint64(12)) | np.uint64(0x3FF0000000000000))
 
@@ -129,19 +129,19 @@ def _one_to_two(bits):
 def fill_uniforms(lanes, out):
     """BLOCK uniform numbers in [0, 1), steps of 2**-52, into out; lanes (4 * BLOCK,) advances."""
     for k in range(BLOCK):
-        out[k] = _one_to_two(_next_bits(lanes, k)) - 1.0
+        out[k] = one_to_two(next_bits(lanes, k)) - 1.0
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
 def fill_exponentials(lanes, out):
     """BLOCK exponential numbers of mean 1 into out; lanes (4 * BLOCK,) advances."""
     for k in range(BLOCK):
-        out[k] = minus_log(2.0 - _one_to_two(_next_bits(lanes, k)))
+        out[k] = minus_log(2.0 - one_to_two(next_bits(lanes, k)))
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
 def fill_logistics(lanes, out):
     """BLOCK logistic numbers into out: ln(v / (1 - v)); lanes (4 * BLOCK,) advances."""
     for k in range(BLOCK):
-        v = _one_to_two(_next_bits(lanes, k)) - (1.0 - 2.0**-53)  # never 0 or 1
+        v = one_to_two(next_bits(lanes, k)) - (1.0 - 2.0**-53)  # never 0 or 1
         out[k] = minus_log((1.0 - v) / v)

@@ -5,6 +5,7 @@ and an empty right contact would cause; f± = F_R + (F_L - F_R) g±.
 """
 
 from dataclasses import dataclass
+from dataclasses import field as dataclass_field
 
 import numpy as np
 from numba import njit
@@ -27,6 +28,10 @@ class Sample:
     arrivals: np.ndarray  # (K, 2) filling that arrives at each node from the left, from the right
     cells: np.ndarray  # (F, C, 2) mean over each cell of the integrals over g+ and g-
     field: np.ndarray | None  # (2, B, C): g+ and g-; None for one bin
+    # Only with directions: 'densities' (K, 4) filling of right- and left-moving states before each
+    # node, left- and right-moving behind it; 'lost' (K-1,) mean u_x that walls take in each segment
+    # and 'views' (V, 2, D) crossings by direction, both weighted with the drive of the current.
+    rays: dict = dataclass_field(default_factory=dict)
 
 
 def empty_counts(problem):

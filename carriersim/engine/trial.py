@@ -29,6 +29,8 @@ from carriersim.engine.mechanisms import (
     edges_of,
     temperatures,
 )
+from carriersim.engine.planes import mean_passing_flux
+from carriersim.engine.space import BACKSCATTER
 from carriersim.fermi import mean_occupation
 
 MOST_SWEEPS = 3000
@@ -56,6 +58,9 @@ class Trial(NamedTuple):
     first_meV: float
     step_meV: float
     bath_kT: float
+    oblique: float  # path of a flight per length along the channel, see space.OBLIQUE; 1 in d = 1
+    turned: float  # share of carriers that an elastic event takes to the other half space
+    wall_rate: float  # per nm: carriers of a half space that walls scatter
 
 
 class Medium(NamedTuple):
@@ -75,6 +80,7 @@ class Medium(NamedTuple):
     rate: np.ndarray  # (P,) per nm
     number: np.ndarray  # (P,)
     balance: np.ndarray  # (B,) per nm, what bins alone would change in the equilibrium
+    oblique: float  # see Trial; here h is the same for all directions of a half space
 
 
 def solve_trial(problem):
@@ -117,6 +123,9 @@ def solve_trial(problem):
         first_meV=axis.first_meV,
         step_meV=axis.step_meV,
         bath_kT=setting.bath_kT,
+        oblique=1.0 if problem.space is None else problem.space.oblique,
+        turned=1.0 if problem.space is None else 0.5,
+        wall_rate=0.0 if problem.space is None else problem.space.wall_rate,
     )
 
 
@@ -163,11 +172,18 @@ def medium_of(problem, edges):
     passing = np.array(
         [[passes_at(k, e, geometry, relaxed.tables) for k in range(nodes)] for e in centres]
     )
+    space = problem.space
+    oblique = 1.0 if space is None else space.oblique
+    if space is not None:
+        for k in np.flatnonzero(space.planes.tunnel):
+            passing[:, k] = mean_passing_flux(passing[:, k], True, space.dimension)
     elastic = np.tile(geometry.thickness / geometry.length_nm, (centres.size, 1))
     if relaxed.tables is not None:
         elastic += np.array(
             [[varying_rate(s, e, relaxed.tables) for s in range(nodes - 1)] for e in centres]
         )
+    if space is not None:  # mean free paths; walls take as much again from each half space
+        elastic = elastic / BACKSCATTER[space.dimension] + 0.5 * space.wall_rate
     phonons = relaxed.mechanisms
     shifts = [phonon_shift(w, relaxed.axis.step_meV) for w in phonons.phonon_meV]
     shift, part = np.array(shifts, float).reshape(-1, 2).T
@@ -186,6 +202,7 @@ def medium_of(problem, edges):
         rate=phonons.phonon_rate,
         number=phonons.phonon_number,
         balance=np.zeros(centres.size),
+        oblique=oblique,
     )
     still = np.broadcast_to(relaxed.reference[None, :, None, None], (2, centres.size, 1, 2))
     return medium._replace(balance=balance_of(np.ascontiguousarray(still), medium))
@@ -304,9 +321,11 @@ def _rates(b, value, targets, extra, medium, decay, source):
                 n, rate = medium.number[k], medium.rate[k]
                 out += rate * ((n + 1.0) * (1.0 - lower) + n * (1.0 - upper))
                 into += rate * ((n + 1.0) * upper + n * lower)
-            decay[c, edge] = out + into + extra
+            along = medium.oblique
+            decay[c, edge] = along * (out + into + extra)
             for side in range(2):
-                source[side, c, edge] = into + targets[side, b, c, edge] - medium.balance[b]
+                given = along * (into + targets[side, b, c, edge])
+                source[side, c, edge] = given - medium.balance[b]
 
 
 @njit(cache=True, error_model="numpy")

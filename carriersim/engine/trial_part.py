@@ -17,14 +17,16 @@ _GAUSS = 0.5 - 0.5 / np.sqrt(3.0), 0.5 + 0.5 / np.sqrt(3.0)  # h is linear in a 
 
 def trial_part(problem, trial):
     """Tallies of the trial occupation alone: a dict as Rounds.run makes of the particles'."""
-    relaxed = problem.relaxed
+    relaxed, space = problem.relaxed, problem.space
     number, energy = number_and_energy(problem, trial.value, trial.slope)
-    outer = contact_integrals(problem.geometry, relaxed.tables, relaxed.probes, trial)
+    planes = None if space is None else space.planes
+    given = problem.geometry, planes, relaxed.tables, relaxed.probes, trial
+    outer = contact_integrals(*given, *_average(space, crossing=True))
     arrivals, departures = _at_nodes(problem, number, outer)
     n, u = number.mean(axis=-1), energy.mean(axis=-1)
     heat, turned = phonon_integrals(problem.geometry, relaxed.mechanisms, trial)
-    widths = np.diff(problem.cell_edges_nm)
-    return {
+    widths = np.diff(problem.cell_edges_nm) * trial.oblique
+    part = {
         "current": departures[-1, 0],
         "energy": np.array([outer[0, 1] - outer[1, 1], outer[2, 1] - outer[3, 1]]),
         "arrivals": arrivals,
@@ -35,6 +37,50 @@ def trial_part(problem, trial):
         "turned": turned,
         "field": trial.value.mean(axis=-1),
     }
+    if space is None:
+        return part
+    # h is the same for all directions of a half space, except for what leaves the channel.
+    outer = contact_integrals(*given, *_average(space, crossing=False))
+    dense = _at_nodes(problem, number, outer)
+    flux = np.stack([departures[:, 0], arrivals[:, 1]], axis=-1)
+    flux[-1] = arrivals[-1, 0], departures[-1, 1]
+    return part | {
+        "densities": np.stack(
+            [dense[0][:, 0], dense[1][:, 1], dense[0][:, 1], dense[1][:, 0]], axis=-1
+        ),
+        "lost": _lost_to_walls(problem, n[0] - n[1]),
+        "views": flux[space.view_nodes, :, None] * _flux_classes(space),
+    }
+
+
+def _average(space, crossing):
+    """|u_x| and weights that average over a flux by the cosine law, or over a half space."""
+    if space is None:
+        return np.ones(1), np.ones(1)
+    x, weight = np.polynomial.legendre.leggauss(24)
+    share, weight = 0.5 * (x + 1.0), 0.5 * weight
+    if space.dimension == 3:
+        return (np.sqrt(share) if crossing else share), weight
+    return (np.sqrt(1.0 - share**2) if crossing else np.cos(0.5 * np.pi * share)), weight
+
+
+def _flux_classes(space):
+    """Share of each class of direction in a flux by the cosine law, (D,)."""
+    edges = space.planes.view_edges
+    if space.dimension == 3:
+        return -np.diff(edges**2)
+    return np.diff(np.sqrt(np.maximum(1.0 - edges**2, 0.0)))
+
+
+def _lost_to_walls(problem, difference):
+    """u_x that walls take from h in each segment, (S,); difference: (C,) of the half spaces.
+
+    Mean u_x of what falls on a wall: 4/(3 pi) in d = 3, 1/2 in d = 2.
+    """
+    space, geometry = problem.space, problem.geometry
+    mean = 4.0 / (3.0 * np.pi) if space.dimension == 3 else 0.5
+    amounts = difference * np.diff(problem.cell_edges_nm) * (space.wall_rate * mean)
+    return np.add.reduceat(amounts, geometry.first_cell)
 
 
 def _at_nodes(problem, number, outer):
@@ -51,21 +97,25 @@ def _at_nodes(problem, number, outer):
 
 
 @njit(cache=True, error_model="numpy")
-def contact_integrals(geometry, tables, probes, trial):
+def contact_integrals(geometry, planes, tables, probes, trial, cosines, weights):
     """Number and energy about a common step, (4, 2): from and into the left, into and from the
-    right contact."""
+    right contact; averaged over directions |u_x| = cosines."""
     result = np.zeros((4, 2))
     last = geometry.transmission.size - 1
     step = trial.step_meV / FINE
+    values = np.empty(4)
     for i in range(trial.value.shape[1] * FINE):
         energy = trial.first_meV + (i + 0.5) * step
         full = 1.0 if energy < 0.0 else 0.0
-        values = (
-            fermi(energy, trial.mu_left, trial.left_kT),
-            leaving(1, energy, 0, geometry, tables, probes, trial),
-            leaving(0, energy, last, geometry, tables, probes, trial),
-            fermi(energy, 0.0, trial.right_kT),
-        )
+        values[0] = fermi(energy, trial.mu_left, trial.left_kT)
+        values[1] = values[2] = 0.0
+        for n in range(cosines.size):
+            c = cosines[n]
+            into = leaving(1, energy, 0, c, geometry, planes, tables, probes, trial)
+            values[1] += weights[n] * into
+            into = leaving(0, energy, last, c, geometry, planes, tables, probes, trial)
+            values[2] += weights[n] * into
+        values[3] = fermi(energy, 0.0, trial.right_kT)
         for k in range(4):
             result[k, 0] += (values[k] - full) * step
             result[k, 1] += (values[k] - full) * step * energy
@@ -117,13 +167,16 @@ def phonon_integrals(geometry, mechanisms, trial):
     bins, cells = trial.value.shape[1:3]
     heat, turned = np.zeros(cells), np.zeros(cells)
     step = trial.step_meV / FINE
+    # With directions u_x counts: an even half space loses 1/oblique of its flights' u_x, and twice
+    # what goes over to the other half space.
+    along = 1.0 if trial.oblique == 1.0 else 2.0 / trial.oblique
     for segment in range(geometry.cells.size):
         width = geometry.length_nm[segment] / geometry.cells[segment]
         first = geometry.first_cell[segment]
         for c in range(first, first + geometry.cells[segment]):
             for k in range(mechanisms.phonon_meV.size):
                 w, n = mechanisms.phonon_meV[k], mechanisms.phonon_number[k]
-                factor = 0.5 * mechanisms.phonon_rate[k] * 0.5 * width * step
+                factor = 0.5 * mechanisms.phonon_rate[k] * 0.5 * width * step * trial.oblique
                 for place in range(2):
                     down = swing = 0.0
                     for i in range(bins * FINE):
@@ -137,5 +190,5 @@ def phonon_integrals(geometry, mechanisms, trial):
                         swing += (n + 1.0) * (u0 * (1.0 - l1) - u1 * (1.0 - l0))
                         swing += n * (l0 * (1.0 - u1) - l1 * (1.0 - u0))
                     heat[c] += w * factor * down
-                    turned[c] += factor * swing
+                    turned[c] += factor * swing * along
     return heat, turned

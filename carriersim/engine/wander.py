@@ -1,20 +1,35 @@
-"""The particle kernel with relaxation, one dimension.
+"""The particle kernel with relaxation.
 
 A particle stands for a piece of the deviation from a known occupation (see deviation.py), of
 either sign; its energy changes in events. Frozen fields (potentials, temperatures) come from
 earlier rounds. Positions count cell widths inside a segment; energies are exact, bins only for the
 tallies.
-"""
 
-from typing import NamedTuple
+In two and three dimensions particles have directions, and a flight counts 1/|u_x| (see rays.py);
+what only these need stands under `if planes is not None`, which compiles to nothing in d = 1.
+"""
 
 import numpy as np
 from numba import njit
 
-from carriersim.engine.events import GOLDEN, passes_at, phonon_shift, varying_rate
+from carriersim.engine.directions import fill_isotropic, fill_lambert
+from carriersim.engine.events import GOLDEN, passes_at, varying_rate
 from carriersim.engine.flights import DONE, STOPPED, TOO_MANY_EVENTS
 from carriersim.engine.mechanisms import FINE, KEPT_BATH, RANDOM_BATH, RANDOM_CARRIERS
-from carriersim.engine.residual import Strengths, at_node, deviation, inside
+from carriersim.engine.planes import crossing_weight, passes_tunnel
+from carriersim.engine.rays import FAR, direction_class
+from carriersim.engine.residual import deviation
+from carriersim.engine.sources import (
+    ENERGY_LEFT,
+    ENERGY_RIGHT,
+    FLIGHTS,
+    LEFT_NUMBER,
+    OUT_RIGHT,
+    SOURCES,
+    Particles,
+    aim_from,
+    emit,
+)
 from carriersim.engine.streams import (
     BLOCK,
     fill_exponentials,
@@ -23,100 +38,9 @@ from carriersim.engine.streams import (
     minus_log,
 )
 
-# What a source emits; the order of Sources.share.
-(
-    LEFT_NUMBER,
-    LEFT_HEAT,
-    RIGHT_HEAT,
-    PROBE_HEAT,
-    CARRIER_HEAT,
-    PHONON_PAIR,
-    TRIAL_INSIDE,
-    TRIAL_NODE,
-) = range(8)
-SOURCES = 8
-# Rows of Tally.scalars.
-OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS = range(4)
 # What happens to a particle; BORN: it starts its first flight.
 NOTHING, CHANGED, GONE, BORN = range(4)
 ONE, TWO, THREE, FOUR, FIVE = (np.uint64(n) for n in range(1, 6))
-
-
-class Base(NamedTuple):
-    """Potentials and temperatures of the known occupation: the reference, or a trial; in meV."""
-
-    mu: np.ndarray  # (3, C) right-moving, left-moving, mean; in the middle of cells
-    mu_step: np.ndarray  # (3, C) its change across each cell
-    kT: np.ndarray  # (3, C)
-    probe_mu: np.ndarray  # (K,)
-    probe_kT: np.ndarray  # (K,)
-
-
-class Frozen(NamedTuple):
-    """Fields of earlier rounds; C cells, B bins, K nodes."""
-
-    mu: np.ndarray  # (3, C) right-moving, left-moving, mean, in meV; in the middle of cells
-    mu_step: np.ndarray  # (3, C) its change across each cell
-    kT: np.ndarray  # (3, C) of the carriers
-    probe_mu: np.ndarray  # (K,)
-    probe_kT: np.ndarray  # (K,) of what probes emit
-    base: Base  # the same of what particles are the deviation from
-    reference: np.ndarray  # (B FINE,) for phonons without a trial
-
-
-class Sources(NamedTuple):
-    """Where particles come from; shares are cumulative and end at 1."""
-
-    share: np.ndarray  # (SOURCES,)
-    probe: np.ndarray  # (K,) over nodes
-    carriers: np.ndarray  # (3 C,) over direction (right, left, random) and cell
-    pair: np.ndarray  # (n,) over the phonon pairs listed below
-    pair_place: np.ndarray  # (n,) int32: cell
-    pair_bin: np.ndarray  # (n,) int32: bin of the lower state
-    pair_kind: np.ndarray  # (n,) int8: bits 0 upper leftward, 1 lower leftward, 2 negative, 3 late
-    pair_phonon: np.ndarray  # (n,) int8
-    strengths: Strengths | None  # of a trial's residual
-
-
-class Setting(NamedTuple):
-    """Numbers of a run that the kernel needs."""
-
-    mu_left: float
-    left_sign: float  # of the number that the left contact emits
-    left_kT: float
-    right_kT: float
-    bath_kT: float
-    first_meV: float
-    step_meV: float
-    exact_energy: bool  # no event depends on energy: kept energies are exact
-    carriers: bool  # carriers events happen, so kept energies differ from energies
-    tangent: bool  # follow a small change of the bias instead of the deviation itself
-
-
-class Tally(NamedTuple):
-    """What the kernel adds to."""
-
-    bins: np.ndarray  # (B, C, 4): right (ends, places), left (ends, places)
-    # (C, 12): for right, then for left: number, energy, and energy that carriers events keep, each
-    # as (signed number of flight ends, sum of their places).
-    cells: np.ndarray
-    arrivals: np.ndarray  # (K, 2) signed arrivals from the left, from the right
-    departures: np.ndarray  # (K, 2) signed departures to the right, to the left
-    heat: np.ndarray  # (C,) energy given to the lattice
-    probe_heat: np.ndarray  # (K,)
-    turned: np.ndarray  # (C,) directed flux destroyed by phonons
-    scalars: np.ndarray  # (4,)
-
-
-@njit(cache=True, error_model="numpy", forceinline=True)
-def _uniform(uniforms, lanes, position):
-    """One uniform number in (0, 1]."""
-    q = position[1]
-    if q == BLOCK:
-        fill_uniforms(lanes, uniforms)
-        q = 0
-    position[1] = q + 1
-    return uniforms[q] + 1.1102230246251565e-16
 
 
 @njit(cache=True, error_model="numpy", forceinline=True)
@@ -128,165 +52,10 @@ def _box(base, mu, kT, u, v):
     return energy
 
 
-@njit(cache=True, error_model="numpy", forceinline=True)
-def _heat_energy(kT, bath_kT, uniforms, lanes, position):
-    """Distance from mu of a member of F(mu, T) - F(mu, T_b).
-
-    The difference is an integral over temperatures between the two of z sech^2(z/2)/4, z = e/kT:
-    a gamma variable, accepted with probability 1/(1 + exp(-z))^2 (ln 2 on average).
-    """
-    between = bath_kT + (kT - bath_kT) * _uniform(uniforms, lanes, position)
-    while True:
-        product = _uniform(uniforms, lanes, position) * _uniform(uniforms, lanes, position)
-        z = minus_log(product)
-        if _uniform(uniforms, lanes, position) * (1.0 + product) ** 2 < 1.0:
-            return between * z
-
-
-class Particles(NamedTuple):
-    """One or two particles that a source emits."""
-
-    place: np.ndarray  # (2,) int64: its segment; for a particle at a node: the node
-    numbers: np.ndarray  # (2, 5): place in the segment (cells), energy, kept energy, sign, heat
-    flags: np.ndarray  # (2, 2) bool: moves right; starts at a node
-
-
-@njit(cache=True, error_model="numpy", forceinline=True)
-def _put(start, member, segment, place, energy, kept, sign, heat, right, at_node):
-    start.place[member] = segment
-    start.numbers[member, 0] = place
-    start.numbers[member, 1] = energy
-    start.numbers[member, 2] = kept
-    start.numbers[member, 3] = sign
-    start.numbers[member, 4] = heat
-    start.flags[member, 0] = right
-    start.flags[member, 1] = at_node
-
-
-@njit(cache=True, error_model="numpy", forceinline=True)
-def _segment_of(geometry, cell):
-    return np.searchsorted(geometry.first_cell, cell, side="right") - 1
-
-
-@njit(cache=True, error_model="numpy")
-def _emit(
-    kind, rest, geometry, tables, mechanisms, probes, frozen, trial, sources, setting, uniforms,
-    lanes, position, tally, start,
-):  # fmt: skip
-    """Draw from a source; returns the number of particles put into start (1 or 2).
-
-    rest: uniform number left over from choosing the source.
-    """
-    last = geometry.transmission.size - 1
-    if trial is not None:
-        if kind == TRIAL_INSIDE or kind == TRIAL_NODE:
-            return _emit_residual(kind, rest, geometry, tables, mechanisms, probes, trial, sources,
-                                  uniforms, lanes, position, start)  # fmt: skip
-    if kind == PHONON_PAIR:
-        return _emit_pair(rest, geometry, mechanisms, sources, setting, uniforms, lanes, position,
-                          tally, start)  # fmt: skip
-    if kind == LEFT_HEAT or kind == RIGHT_HEAT:
-        left = kind == LEFT_HEAT
-        mu, kT = (setting.mu_left, setting.left_kT) if left else (0.0, setting.right_kT)
-        base_kT = setting.bath_kT
-        segment, place, right, at_node, heat = (0 if left else last), 0.0, left, True, 1.0
-    elif kind == PROBE_HEAT:
-        segment = min(np.searchsorted(sources.probe, rest, side="right"), last)
-        mu, kT = frozen.probe_mu[segment], frozen.probe_kT[segment]
-        base_kT = frozen.base.probe_kT[segment]
-        place, at_node, heat = 0.0, True, 2.0
-        right = _uniform(uniforms, lanes, position) < probes.emits_right[segment]
-    else:
-        entry = min(
-            np.searchsorted(sources.carriers, rest, side="right"), sources.carriers.size - 1
-        )
-        cells = frozen.mu.shape[1]
-        which, cell = entry // cells, entry % cells
-        mu, kT, base_kT = (
-            frozen.mu[which, cell],
-            frozen.kT[which, cell],
-            frozen.base.kT[which, cell],
-        )
-        segment = _segment_of(geometry, cell)
-        place = cell - geometry.first_cell[segment] + _uniform(uniforms, lanes, position)
-        right = which == 0 or (which == 2 and _uniform(uniforms, lanes, position) < 0.5)
-        at_node, heat = False, 1.0
-    away = _heat_energy(kT, base_kT, uniforms, lanes, position)
-    sign = 1.0 if kT > base_kT else -1.0
-    for member in range(2):
-        energy = mu + away if member == 0 else mu - away
-        charge = sign if member == 0 else -sign
-        kept = energy
-        if kind == CARRIER_HEAT and setting.exact_energy:
-            kept = 0.0
-        if kind == PROBE_HEAT:
-            tally.probe_heat[segment] -= charge * energy
-        elif kind == LEFT_HEAT:
-            tally.scalars[ENERGY_LEFT] += charge * energy
-        elif kind == RIGHT_HEAT:
-            tally.scalars[ENERGY_RIGHT] -= charge * energy
-        _put(start, member, segment, place, energy, kept, charge, heat, right, at_node)
-    return 2
-
-
-@njit(cache=True, error_model="numpy")
-def _emit_pair(
-    rest, geometry, mechanisms, sources, setting, uniforms, lanes, position, tally, start
-):  # fmt: skip
-    """A pair of the quadratic source: + in the lower state, - above, times the pair's sign."""
-    entry = min(np.searchsorted(sources.pair, rest, side="right"), sources.pair.size - 1)
-    cell, kind = sources.pair_place[entry], sources.pair_kind[entry]
-    w = mechanisms.phonon_meV[sources.pair_phonon[entry]]
-    # Where the step does not divide w the upper state lies in one of two bins: early or late part.
-    _, shift = phonon_shift(w, setting.step_meV)
-    u = _uniform(uniforms, lanes, position)
-    part = 1.0 - shift + shift * u if kind & 8 else (1.0 - shift) * u
-    energy = setting.first_meV + (sources.pair_bin[entry] + part) * setting.step_meV
-    segment = _segment_of(geometry, cell)
-    place = cell - geometry.first_cell[segment] + _uniform(uniforms, lanes, position)
-    sign = -1.0 if kind & 4 else 1.0
-    tally.heat[cell] += sign * w
-    _put(start, 0, segment, place, energy, energy, sign, 0.0, not kind & 2, False)
-    upper = energy + w
-    _put(start, 1, segment, place, upper, upper, -sign, 0.0, not kind & 1, False)
-    return 2
-
-
-@njit(cache=True, error_model="numpy")
-def _emit_residual(
-    kind, rest, geometry, tables, mechanisms, probes, trial, sources, uniforms, lanes, position,
-    start,
-):  # fmt: skip
-    """A particle from the residual of the trial occupation; its weight carries the sign."""
-    bins, cells = trial.value.shape[1:3]
-    within = kind == TRIAL_INSIDE
-    table = sources.strengths.inside if within else sources.strengths.nodes
-    entry = min(np.searchsorted(table, rest, side="right"), table.size - 1)
-    u = _uniform(uniforms, lanes, position)
-    part = _uniform(uniforms, lanes, position)
-    if within:
-        cell, b, side = entry % cells, (entry // cells) % bins, entry // (cells * bins)
-        energy = trial.first_meV + (b + u) * trial.step_meV
-        segment = _segment_of(geometry, cell)
-        r = inside(side, energy, segment, cell, part, geometry, tables, mechanisms, trial)
-        weight = r * trial.step_meV * geometry.length_nm[segment] / geometry.cells[segment]
-        weight /= sources.strengths.inside_each[entry]
-        place = cell - geometry.first_cell[segment] + part
-        _put(start, 0, segment, place, energy, energy, weight, 0.0, side == 0, False)
-        return 1
-    nodes = geometry.transmission.size
-    b, node, side = entry % bins, (entry // bins) % nodes, entry // (bins * nodes)
-    energy = trial.first_meV + (b + u) * trial.step_meV
-    r = at_node(side, energy, node, geometry, tables, probes, trial)
-    weight = r * trial.step_meV / sources.strengths.nodes_each[entry]
-    _put(start, 0, node, 0.0, energy, energy, weight, 2.0, side == 0, True)
-    return 1
-
-
 @njit(cache=True, nogil=True, error_model="numpy")
 def wander(
-    first, histories, offset, geometry, tables, mechanisms, probes, frozen, trial, sources,
-    setting, stream, tally, stop, event_limit,
+    first, histories, offset, geometry, planes, walls, second, tables, mechanisms, probes, frozen,
+    trial, sources, setting, stream, tally, stop, event_limit,
 ):  # fmt: skip
     """Follow `histories` draws from the sources, each to its end; returns the kernel's outcome.
 
@@ -319,14 +88,28 @@ def wander(
     steady = rates.sum()
     rate_of = (elastic_of + steady) * cell_nm  # without what depends on energy
     free_of = 1.0 / rate_of
-    whole = 0.5 if not setting.tangent else 1.0  # mean energy of a redraw, over its potential
+    half = 0.5 if not setting.tangent else 1.0  # mean energy of a redraw, over its potential
     left_part = 1.0 / share[LEFT_NUMBER] if share[LEFT_NUMBER] > 0.0 else 0.0
     last = geometry.transmission.size - 1
     top = bins.shape[0]
-    start = Particles(np.zeros(2, np.int64), np.zeros((2, 5)), np.zeros((2, 2), np.bool_))
-    origin, numbers, flags = start.place, start.numbers, start.flags
+    start = Particles(
+        np.zeros(2, np.int64), np.zeros((2, 5)), np.zeros((2, 2), np.bool_), np.zeros((2, 5))
+    )
+    origin, numbers, flags, aim = start.place, start.numbers, start.flags, start.aim
     logistics = np.empty(BLOCK)
     p, q, r = position[0], position[1], BLOCK
+    ux = new_ux = weight = new_weight = 1.0
+    redirected = False
+    if planes is not None:
+        isotropic, lambert = stream.isotropic, stream.lambert
+        densities, lost, views = tally.densities, tally.lost, tally.views
+        tunnel, diffuse = planes.tunnel, planes.diffuse
+        looked_at, view_edges = planes.looked_at, planes.view_edges
+        whole = walls is not None
+        i, j = position[2], position[3]
+        uy = uz = across = above = 0.0
+        # Without walls or events nothing bounds the path in a cell: as at nodes.
+        grazes = walls is None and tables is None and rate_of.max() == 0.0 and not any_phonons
     tau = 0.0
     made = 0
     for history in range(first, first + histories):
@@ -342,22 +125,30 @@ def wander(
             r += 1
             new_kept = new
             if setting.exact_energy:  # energies decide nothing: their mean has less noise
-                new_kept = setting.mu_left * whole
+                new_kept = setting.mu_left * half
             scalars[ENERGY_LEFT] += setting.left_sign * new_kept
             origin[0] = 0
             numbers[0, 1], numbers[0, 2] = new, new_kept
             numbers[0, 3], numbers[0, 4] = setting.left_sign, 0.0
             flags[0, 0] = flags[0, 1] = True
             members = 1
+            if planes is not None:
+                position[1], position[2], position[3] = q, i, j
+                aim_from(0, True, True, planes, walls, second, stream, start)
+                q, i, j = position[1], position[2], position[3]
         else:
             kind = min(np.searchsorted(share, quantile, side="right"), SOURCES - 1)
             rest = (quantile - share[kind - 1]) / (share[kind] - share[kind - 1])
             position[1] = q
-            members = _emit(
-                kind, rest, geometry, tables, mechanisms, probes, frozen, trial, sources, setting,
-                uniforms, lanes, position, tally, start,
+            if planes is not None:
+                position[2], position[3] = i, j
+            members = emit(
+                kind, rest, geometry, planes, walls, second, tables, mechanisms, probes, frozen,
+                trial, sources, setting, stream, tally, start,
             )  # fmt: skip
             q = position[1]
+            if planes is not None:
+                i, j = position[2], position[3]
         for member in range(members):
             node = segment = origin[member]
             y, energy, kept = numbers[member, 0], numbers[member, 1], numbers[member, 2]
@@ -375,6 +166,13 @@ def wander(
                 cell, part = first_cell[segment] + inner, y - inner
             outcome = BORN
             new, new_kept, onward = energy, kept, right
+            redirected = False
+            if planes is not None:
+                ux, uy, uz = aim[member, 0], aim[member, 1], aim[member, 2]
+                across, above = aim[member, 3], aim[member, 4]
+                weight = 1.0 / abs(ux)
+                if grazes:
+                    weight = crossing_weight(weight)
             if p >= BLOCK:
                 fill_exponentials(lanes, exponentials)
                 p = 0
@@ -387,6 +185,10 @@ def wander(
                 if outcome == CHANGED:
                     turned_here = onward != right
                     begin = step if turned_here else -step
+                    if planes is not None:
+                        step *= weight
+                        begin *= new_weight if redirected else weight
+                        turned_here = redirected
                     into = np.uint64(0 if onward else 2)
                     later = bin_
                     if new != energy:
@@ -420,7 +222,11 @@ def wander(
                         cells[c, into + FOUR] += begin * new_kept
                         cells[c, into + FIVE] += begin * new_kept * part
                     energy, kept, right = new, new_kept, onward
+                    if planes is not None and redirected:
+                        ux, weight, redirected = new_ux, new_weight, False
                 else:
+                    if planes is not None:
+                        step *= weight
                     if outcome == BORN:
                         step = -step
                     if 0 <= bin_ < top:
@@ -447,6 +253,13 @@ def wander(
                             return TOO_MANY_EVENTS
                         fill_uniforms(lanes, uniforms)
                         q = 0
+                    if planes is not None:  # a node uses up to two of the second kind
+                        if i >= BLOCK:
+                            fill_isotropic(lanes, isotropic, planes.dimension, whole)
+                            i = 0
+                        if j > BLOCK - 2:
+                            fill_lambert(lanes, lambert, planes.dimension, whole)
+                            j = 0
                     if at_node:
                         # A scatterer lets pass or turns round, a probe may absorb.
                         at_node = False
@@ -455,9 +268,41 @@ def wander(
                             made += 1
                             arrivals[node, 0 if right else 1] += sign
                             chance = passes_at(node, energy, geometry, tables)
+                            if planes is not None:
+                                densities[node, 0 if right else 2] += sign * crossing_weight(weight)
+                                if looked_at[node] >= 0 and right == (node == last):
+                                    row = direction_class(abs(ux), view_edges)
+                                    views[looked_at[node], 0 if right else 1, row] += sign
+                                normal = chance
+                                if chance < 1.0 and tunnel[node]:
+                                    chance = passes_tunnel(chance, ux)
                             if chance < 1.0:
                                 if uniforms[q] >= chance:
                                     outcome, onward = CHANGED, not right
+                                    if planes is not None:
+                                        redirected = True
+                                        new_ux, new_weight = -ux, weight
+                                        if diffuse[node]:
+                                            if tunnel[node]:  # in proportion to (1 - T) u
+                                                while True:
+                                                    if j > BLOCK - 2:
+                                                        fill_lambert(
+                                                            lanes, lambert, planes.dimension, whole
+                                                        )
+                                                        j = 0
+                                                    if q > BLOCK - 8:
+                                                        fill_uniforms(lanes, uniforms)
+                                                        q = 0
+                                                    q += 1
+                                                    back = passes_tunnel(normal, lambert[0, j])
+                                                    if uniforms[q] < 1.0 - back:
+                                                        break
+                                                    j += 1
+                                            new_ux = lambert[0, j] if onward else -lambert[0, j]
+                                            new_weight = 1.0 / abs(new_ux)
+                                            if walls is not None:
+                                                uy, uz = lambert[1, j], lambert[2, j]
+                                            j += 1
                                 q += 1
                             taken = from_left[node] if right else from_right[node]
                             if taken > 0.0:
@@ -474,14 +319,31 @@ def wander(
                                     )  # fmt: skip
                                     new_kept = new
                                     if setting.exact_energy:
-                                        new_kept = probe_mu[node] * whole
+                                        new_kept = probe_mu[node] * half
                                     probe_heat[node] -= sign * new_kept
                                     onward = uniforms[q + 3] < emits_right[node]
                                     outcome = CHANGED
+                                    if planes is not None:
+                                        redirected = True
+                                        new_ux = lambert[0, j] if onward else -lambert[0, j]
+                                        new_weight = 1.0 / abs(new_ux)
+                                        if walls is not None:
+                                            uy, uz = lambert[1, j], lambert[2, j]
+                                        j += 1
                                     q += 3
                                 q += 1
                         emitted = False
                         departures[node, 0 if onward else 1] += sign
+                        if planes is not None:
+                            leaves, slant = ux, weight
+                            if redirected:
+                                if grazes:
+                                    new_weight = crossing_weight(new_weight)
+                                leaves, slant = new_ux, new_weight
+                            densities[node, 3 if onward else 1] += sign * crossing_weight(slant)
+                            if looked_at[node] >= 0 and onward != (node == last):
+                                row = direction_class(abs(leaves), view_edges)
+                                views[looked_at[node], 0 if onward else 1, row] += sign
                         if node == (last if onward else 0):
                             if onward:
                                 scalars[OUT_RIGHT] += sign
@@ -504,20 +366,81 @@ def wander(
                         rate += phonon_bound[-1, row] * cell_nm[segment]
                         free = 1.0 / rate
                     ahead = cell_count[segment] - y if right else y
-                    if tau >= rate * ahead:
-                        tau -= rate * ahead
-                        node = segment + 1 if right else segment
-                        part = 1.0 if right else 0.0
-                        cell = first_cell[segment] + (cell_count[segment] - 1 if right else 0)
-                        at_node = True
-                        continue
-                    y += tau * free if right else -tau * free
+                    if planes is not None:
+                        # Along the flight, in nm: to the end of the segment, a wall, an event.
+                        width = cell_nm[segment]
+                        face, slant = 0, 1.0 / abs(ux)
+                        path = ahead * width * slant
+                        if walls is not None:
+                            side = walls.size - across if uy > 0.0 else across
+                            side /= max(abs(uy), 1e-300)
+                            if side < path:
+                                path, face = side, 1
+                            if second is not None:
+                                side = second.size - above if uz > 0.0 else above
+                                side /= max(abs(uz), 1e-300)
+                                if side < path:
+                                    path, face = side, 2
+                        until = tau * free * width if rate > 0.0 else FAR
+                        occurs = until < path
+                        if occurs:
+                            path, face = until, -1
+                        tau = 0.0 if occurs else max(tau - path * rate / width, 0.0)
+                        if walls is not None:
+                            across = min(max(across + path * uy, 0.0), walls.size)
+                            if second is not None:
+                                above = min(max(above + path * uz, 0.0), second.size)
+                        if face == 0:
+                            node = segment + 1 if right else segment
+                            part = 1.0 if right else 0.0
+                            cell = first_cell[segment] + (cell_count[segment] - 1 if right else 0)
+                            at_node = True
+                            continue
+                        y = min(max(y + path * ux / width, 0.0), np.float64(cell_count[segment]))
+                        made += 1
+                        if walls is not None:
+                            if face > 0:
+                                mirror = walls.specularity
+                                if second is not None:
+                                    if face == 2:
+                                        mirror = second.specularity
+                                q += 1
+                                if uniforms[q - 1] < mirror:
+                                    if face == 1:
+                                        uy = -uy
+                                    else:
+                                        uz = -uz
+                                    continue
+                                lost[segment] += sign * ux
+                                inner = min(np.int64(y), cell_count[segment] - 1)
+                                cell, part = first_cell[segment] + inner, y - inner
+                                new, new_kept = energy, kept
+                                new_ux = lambert[1, j]
+                                if face == 1:
+                                    uy = -lambert[0, j] if uy > 0.0 else lambert[0, j]
+                                    uz = lambert[2, j]
+                                else:
+                                    uz = -lambert[0, j] if uz > 0.0 else lambert[0, j]
+                                    uy = lambert[2, j]
+                                j += 1
+                                new_weight, onward = 1.0 / abs(new_ux), new_ux > 0.0
+                                outcome, redirected = CHANGED, True
+                                continue
+                    else:
+                        if tau >= rate * ahead:
+                            tau -= rate * ahead
+                            node = segment + 1 if right else segment
+                            part = 1.0 if right else 0.0
+                            cell = first_cell[segment] + (cell_count[segment] - 1 if right else 0)
+                            at_node = True
+                            continue
+                        y += tau * free if right else -tau * free
+                        made += 1
                     if p >= BLOCK:
                         fill_exponentials(lanes, exponentials)
                         p = 0
                     tau = exponentials[p]
                     p += 1
-                    made += 1
                     inner = min(max(np.int64(y), 0), cell_count[segment] - 1)
                     cell, part = first_cell[segment] + inner, y - inner
                     v = rate / cell_nm[segment] * uniforms[q] - elastic
@@ -525,6 +448,12 @@ def wander(
                     new, new_kept, onward = energy, kept, right
                     if v < 0.0:
                         outcome, onward = CHANGED, not right
+                        if planes is not None:
+                            redirected, new_ux = True, isotropic[0, i]
+                            new_weight, onward = 1.0 / abs(new_ux), new_ux > 0.0
+                            if walls is not None:
+                                uy, uz = isotropic[1, i], isotropic[2, i]
+                            i += 1
                         continue
                     which = 0
                     while which < 4 and v >= rates[which]:
@@ -552,11 +481,17 @@ def wander(
                         if not setting.exact_energy:
                             new_kept = new
                         elif to_bath:
-                            new_kept = high * whole
+                            new_kept = high * half
                         if to_bath:
                             heat[cell] += sign * (kept - new_kept)
                         if randomised:
                             onward = uniforms[q + 1] < 0.5
+                            if planes is not None:
+                                redirected, new_ux = True, isotropic[0, i]
+                                new_weight, onward = 1.0 / abs(new_ux), new_ux > 0.0
+                                if walls is not None:
+                                    uy, uz = isotropic[1, i], isotropic[2, i]
+                                i += 1
                         q += 2
                         outcome = CHANGED
                         continue
@@ -582,10 +517,21 @@ def wander(
                             new_kept = new
                             onward = choice & 1 == 0
                             heat[cell] -= sign * change
-                            if onward != right:
+                            if planes is not None:
+                                redirected, new_ux = True, isotropic[0, i]
+                                if (new_ux > 0.0) != onward:
+                                    new_ux = -new_ux
+                                new_weight = 1.0 / abs(new_ux)
+                                turned[cell] += sign * (ux - new_ux)
+                                if walls is not None:
+                                    uy, uz = isotropic[1, i], isotropic[2, i]
+                                i += 1
+                            elif onward != right:
                                 turned[cell] += sign if right else -sign
                             outcome = CHANGED
                             break
     position[0], position[1] = p, q
+    if planes is not None:
+        position[2], position[3] = i, j
     scalars[FLIGHTS] += made
     return DONE
