@@ -591,14 +591,13 @@ def test_energy_dependence_lists_the_ballistic_resistance_only():
         assert named(case) == {"ballistic resistance": approx(BALLISTIC, rel=1e-9)}
 
 
-def test_other_dimensions_have_none_yet(monkeypatch):
-    monkeypatch.setattr("carriersim.scenario.refuse_unsupported", lambda document: [])
+def test_other_dimensions_have_the_ballistic_resistance_only():
     case = read_text(f"""
 channel: {{length_nm: 100, dimension: 3}}
 contacts: {{bias_mV: 10, temperature_K: 10}}
 relaxation: {{mechanisms: [{KEPT}]}}
 """)
-    assert limits.limits_for(case) == ()
+    assert [limit.name for limit in limits.limits_for(case)] == ["ballistic resistance"]
 
 
 @pytest.mark.parametrize("cells", [1, 7, 50, 201])
