@@ -121,6 +121,7 @@ def make_result(problem, observer, totals, scenario, numbers, why, **others):
         iterations=totals.rounds,
         converged=totals.converged,
         stopped_by=totals.stopped_by,
+        trouble=totals.trouble or None,
         linear_response=problem.window.linear,
         ballistic_resistance_ohm=float(observer.ballistic_ohm),
         **_quantities(problem, observer, numbers, why),

@@ -191,6 +191,7 @@ class Result:
     resistance_width_ohm_um: Estimate | None = None
     long_channel: LongChannel | None = None
     trajectories: tuple[Trajectory, ...] = ()
+    trouble: str | None = None  # which carrier used up its events and where, if one did
     drift: str | None = None  # which frozen field drifted most at the end, and where, in words
     drift_sigma: float | None = None  # by how many standard errors
 

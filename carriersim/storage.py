@@ -274,6 +274,8 @@ def summary(result):
         )
     data["limits"] = [asdict(row) for row in result.limits]
     data["why"] = result.why
+    if result.trouble:
+        data["trouble"] = result.trouble
     return data
 
 
@@ -308,6 +310,7 @@ def open_result(directory):
         linear_response=data["linear_response"],
         ballistic_resistance_ohm=data["ballistic_resistance_ohm"],
         why=data["why"],
+        trouble=data.get("trouble"),
         breakdown=_read_list(data["breakdown"], _read_part),
         four_point=_read_list(
             data["four_point"],

@@ -47,6 +47,7 @@ class RelaxedTotals:
     rounds: int = 0
     seconds: float = 0.0
     stopped_by: str = ""
+    trouble: str = ""  # see solve.Totals
     converged: bool = False
     residual: float | None = None
     drift: str = ""  # which field drifts most and where, in words
@@ -152,10 +153,11 @@ def _follow(problem, deviation, goal, workers, stop, progress, most=None):
                 stopped_by = "windows"
             size *= 2
     if len(windows) < FEWEST_WINDOWS:
-        raise NothingDone(f"stopped before two windows were complete ({stopped_by})")
+        why = rounds.trouble or stopped_by
+        raise NothingDone(f"stopped before two windows were complete ({why})")
     totals = _totals(windows, *whole, time.perf_counter() - begin)
     _judge(problem, totals, goal, None)
-    totals.stopped_by = stopped_by
+    totals.stopped_by, totals.trouble = stopped_by, rounds.trouble
     if stopped_by == "max_seconds":  # in the middle of a window
         totals.converged = totals.residual <= DRIFT_SIGMA and not _asks_for_errors(goal)
     return totals

@@ -21,6 +21,7 @@ class Planes(NamedTuple):
     diffuse: np.ndarray  # (K,) bool
     looked_at: np.ndarray  # (K,) int64: which view of the angular distribution, -1 for none
     view_edges: np.ndarray  # (D+1,) cosines, decreasing: classes of direction there
+    view_first: np.ndarray  # (n+1,) int64: where to start looking for the class of int(n cosine)
 
 
 class Walls(NamedTuple):

@@ -107,6 +107,11 @@ class Problem:
         """M at the given energies."""
         return modes_at(self.scenario, energy_meV)
 
+    @property
+    def freely_entered(self):
+        """Whether nothing scatters in the first segment."""
+        return not self.segment_paths[0]
+
 
 def at_energy(value, energy_meV):
     """A number or an EnergyTable (linear, clamped at its ends) at the given energies."""

@@ -24,6 +24,7 @@ def empty_counts(problem):
     return RayCounts(
         tracks=apart((bins, problem.cells, 4)),
         crossings=apart((bins, nodes, 6)),
+        fresh=apart((bins, 2)),
         lost=apart((bins, nodes - 1)),
         views=apart((space.view_nodes.size, 2, space.planes.view_edges.size - 1)),
         transmitted=apart((bins,)),
@@ -47,7 +48,9 @@ def reduce(problem, counts, histories):
     densities[:, passed, LEFT_BEFORE - RIGHT_BEFORE] = densities[
         :, passed, LEFT_BEHIND - RIGHT_BEFORE
     ]
-    _add_emission(problem, densities[:, 0], float(histories))
+    if problem.space.walls[0] is not None or not problem.freely_entered:
+        fresh = counts.fresh * weight[:, None] / oblique
+        _state_emission(problem, densities[:, 0], fresh, float(histories))
     weights = cell_functionals(problem)
     cells = np.zeros((weights.shape[0], problem.cells, 2))
     several = problem.bins is not None
@@ -71,19 +74,21 @@ def reduce(problem, counts, histories):
     )
 
 
-def _add_emission(problem, densities, histories):
-    """Carriers fresh from the left contact, which the kernel leaves out: their mean is known.
+def _state_emission(problem, densities, fresh, histories):
+    """Put the mean of carriers fresh from the left contact, which is known, in place of their sum.
 
-    densities: (B, 4) at the contact.
+    densities: (B, 4) at the contact; fresh: (B, 2), see RayCounts. Not where they fly freely to the
+    next node: there the same carriers count, and nothing may fall on the way.
     """
     space, spectrum = problem.space, problem.spectrum
     chance = np.full(densities.shape[0], problem.geometry.transmission[0])
     if spectrum is not None and spectrum.node_table[0] >= 0:
         chance = spectrum.values[:, spectrum.node_table[0], 0]
     passing = mean_passing(chance, space.planes.tunnel[0], space.dimension)
-    densities[:, RIGHT_BEFORE - RIGHT_BEFORE] = histories
-    densities[:, LEFT_BEFORE - RIGHT_BEFORE] += histories * (1.0 - passing)
-    densities[:, RIGHT_BEHIND - RIGHT_BEFORE] += histories * passing
+    behind, back = histories * passing - fresh[:, 0], histories * (1.0 - passing) - fresh[:, 1]
+    densities[:, RIGHT_BEFORE - RIGHT_BEFORE] += behind + back
+    densities[:, LEFT_BEFORE - RIGHT_BEFORE] += back
+    densities[:, RIGHT_BEHIND - RIGHT_BEFORE] += behind
 
 
 @njit(cache=True, nogil=True, error_model="numpy")

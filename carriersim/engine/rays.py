@@ -28,6 +28,8 @@ from carriersim.engine.planes import crossing_weight, passes_tunnel
 from carriersim.engine.streams import BLOCK, fill_exponentials, fill_uniforms
 
 EVENTS, NODE = 3, 4  # more entries of RayCounts.work: events made, node last met
+ROOT_TWO = np.uint64(0x6A09E667F3BCC908)  # 2**64 (sqrt(2) - 1)
+SHIFT = np.uint64(0xD1342543DE82EF95)  # odd
 FAR = 1e280  # nm, a flight that nothing ends
 TINY = 1e-300  # in place of a component 0: no wall is met
 # Columns of RayCounts.crossings.
@@ -43,6 +45,8 @@ class RayCounts(NamedTuple):
     # (B, K, 6): arrivals from the left and from the right; then sums of 1/|u_x| over carriers that
     # move right before the node, left before it, left behind it, right behind it.
     crossings: np.ndarray
+    # (B, 2) of these the carriers fresh from the left contact: behind it, and sent back at once.
+    fresh: np.ndarray
     lost: np.ndarray  # (B, K-1): sum of u_x of carriers that a wall scatters
     views: np.ndarray  # (V, 2, D): carriers moving right, left, by direction, times `drive`
     transmitted: np.ndarray  # (B,) histories that reached the right contact
@@ -63,6 +67,7 @@ def cross(
     """
     # One function with its arrays at hand: see flights.fly.
     tracks, crossings, lost = counts.tracks, counts.crossings, counts.lost
+    fresh = counts.fresh
     views, transmitted, work = counts.views, counts.transmitted, counts.work
     lanes, exponentials, uniforms = stream.lanes, stream.exponentials, stream.uniforms
     isotropic, lambert, position = stream.isotropic, stream.lambert, stream.position
@@ -70,7 +75,7 @@ def cross(
     per_nm_of = cells / length_nm
     rate_of = geometry.thickness / length_nm
     tunnel, diffuse = planes.tunnel, planes.diffuse
-    view, view_edges = planes.looked_at, planes.view_edges
+    view, view_edges, view_first = planes.looked_at, planes.view_edges, planes.view_first
     last = geometry.transmission.size - 1
     dimension, whole = planes.dimension, walls is not None
     e, q, i, j = position[0], position[1], position[2], position[3]
@@ -85,12 +90,14 @@ def cross(
         if j >= BLOCK:
             fill_lambert(lanes, lambert, dimension, whole)
             j = 0
-        ux = lambert[0, j]
+        ux = emitted_cosine(history, offset, dimension)
         if walls is not None:
             if q > BLOCK - 2:
                 fill_uniforms(lanes, uniforms)
                 q = 0
-            uy, uz = lambert[1, j], lambert[2, j]
+            # The same turn about the axis as the direction in the block.
+            wider = np.sqrt((1.0 - ux * ux) / (1.0 - lambert[0, j] * lambert[0, j]))
+            uy, uz = wider * lambert[1, j], wider * lambert[2, j]
             y = walls.size * uniforms[q]
             q += 1
             if second is not None:
@@ -111,12 +118,11 @@ def cross(
             # At a node: pass on, turn back, or leave the channel.
             events += 1
             crossings[b, node, FROM_LEFT if right else FROM_RIGHT] += 1.0
-            if not born:
-                counted = crossing_weight(weight)
-                crossings[b, node, RIGHT_BEFORE if right else LEFT_BEHIND] += counted
+            counted = crossing_weight(weight)
+            crossings[b, node, RIGHT_BEFORE if right else LEFT_BEHIND] += counted
             seen = view[node]
             if seen >= 0 and right == (node == last):
-                row = direction_class(abs(ux), view_edges)
+                row = direction_class(abs(ux), view_edges, view_first)
                 views[seen, 0 if right else 1, row] += drive[b]
             chance = passes(node, b, energy, geometry, spectrum)
             turned = False
@@ -166,11 +172,12 @@ def cross(
                         j += 1
                         weight = 1.0 / abs(ux)
                         grazes = False
-                if not born:
-                    counted = crossing_weight(weight)
-                    crossings[b, node, RIGHT_BEHIND if right else LEFT_BEFORE] += counted
+                counted = crossing_weight(weight)
+                crossings[b, node, RIGHT_BEHIND if right else LEFT_BEFORE] += counted
+            if born:
+                fresh[b, 0 if right else 1] += counted
             if seen >= 0 and right != (node == last):
-                row = direction_class(abs(ux), view_edges)
+                row = direction_class(abs(ux), view_edges, view_first)
                 views[seen, 0 if right else 1, row] += drive[b]
             if node == (last if right else 0):
                 if record is not None:
@@ -325,6 +332,21 @@ def cross(
     return DONE
 
 
+@njit(cache=True, inline="always", error_model="numpy")
+def emitted_cosine(history, offset, dimension):
+    """u_x of a history at the left contact, by the cosine law.
+
+    An additive sequence like that of the energies (events.draw_energy), so that any number of
+    histories spreads evenly over the directions; a multiple of the batch's shift shifts it.
+    """
+    turn = offset * SHIFT + np.uint64(history) * ROOT_TWO
+    quantile = (np.float64(turn >> np.uint64(11)) + 0.5) * 2.0**-53
+    if dimension == 3:
+        return np.sqrt(quantile)
+    sine = 2.0 * quantile - 1.0
+    return np.sqrt(1.0 - sine * sine)
+
+
 @njit(cache=True, error_model="numpy")
 def _may_go_on(work, stop, node):
     """Whether a history may draw another block of random numbers."""
@@ -336,9 +358,9 @@ def _may_go_on(work, stop, node):
 
 
 @njit(cache=True, inline="always", error_model="numpy")
-def direction_class(cosine, edges):
-    """Class of a cosine between decreasing edges."""
-    row = 0
+def direction_class(cosine, edges, first):
+    """Class of a cosine between decreasing edges; first: see Planes.view_first."""
+    row = first[np.int64(cosine * (first.size - 1))]
     while row < edges.size - 2 and cosine <= edges[row + 1]:
         row += 1
     return row

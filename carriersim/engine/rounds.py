@@ -10,10 +10,18 @@ from numba import njit
 from carriersim.engine import sources as w
 from carriersim.engine import streams
 from carriersim.engine.directions import new_ray_stream
-from carriersim.engine.flights import DONE
+from carriersim.engine.flights import DONE, TOO_MANY_EVENTS
 from carriersim.engine.pairs import no_pairs, phonon_pairs
+from carriersim.engine.planes import Walls
 from carriersim.engine.residual import cumulative
-from carriersim.engine.solve import EVENT_LIMIT, chunks, new_stream, offset_of, several
+from carriersim.engine.solve import (
+    EVENT_LIMIT,
+    chunks,
+    new_stream,
+    offset_of,
+    several,
+    too_many,
+)
 from carriersim.engine.wander import wander
 
 FIRST_SIZE = 96  # histories of each batch in the rounds of the first window, at least
@@ -24,6 +32,7 @@ TRUST = 3.0  # rounds that a trial occupation counts for
 GROUPS = 16
 MOST_PAIRS = 0.5  # strength of the pair source, over that of the residual
 BLOCK_PATHS = 0.4  # of the phonons' path: frozen occupations are averaged over such blocks
+NO_WALLS = Walls(1e200, 1.0)  # a second pair that nobody meets: one compiled variant for both
 RAY_SUMS = ("densities", "lost", "views")  # only where carriers have directions
 NO_SHAPES = (0, 4), (0,), (0, 2, 0)
 SUMS = ("current", "energy", "arrivals", "departures", "cells", "heat", "probe_heat", "turned")
@@ -85,7 +94,7 @@ def empty_tally(problem):
         heat=np.zeros(cells),
         probe_heat=np.zeros(nodes),
         turned=np.zeros(cells),
-        scalars=np.zeros(4),
+        scalars=np.zeros(6),
         **_direction_tallies(problem),
     )
 
@@ -151,7 +160,10 @@ class Rounds:
         self.oblique = 1.0 if problem.space is None else problem.space.oblique
         self.met = (None, None, None)  # planes and two pairs of walls
         if problem.space is not None:
-            self.met = (problem.space.planes, *problem.space.walls)
+            first, second = problem.space.walls
+            if first is not None and second is None:
+                second = NO_WALLS
+            self.met = (problem.space.planes, first, second)
         self.fields = Fields(
             np.zeros((self.batches, problem.cells, 2, 3)),
             np.zeros((self.batches, problem.nodes_nm.size)),
@@ -161,6 +173,7 @@ class Rounds:
         if deviation.part:
             self.fields.weight = TRUST * first_size(problem) * self.batches
         self.pairs, self.pair_strength = no_pairs(), 0.0
+        self.trouble = ""  # which carrier went on for ever, and where
         self.strength = 0.0  # of all sources in the last round, in meV
 
     def prepare(self):
@@ -222,6 +235,9 @@ class Rounds:
             self.deviation.trial, sources, self.setting, self.streams[batch], tally,
             self.stop.flag, EVENT_LIMIT,
         )  # fmt: skip
+        if status == TOO_MANY_EVENTS:
+            number, node = (int(tally.scalars[k]) for k in (w.HISTORY, w.NODE))
+            self.trouble = too_many(number, batch, self.problem.nodes_nm[node])
         if status != DONE:
             return None
         scale = total / max(histories, 1)

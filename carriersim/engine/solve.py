@@ -14,9 +14,11 @@ from joblib import Parallel, delayed
 
 from carriersim.engine import flights, ray_tallies, rays, streams, tallies
 from carriersim.engine.directions import new_ray_stream
+from carriersim.engine.straight import is_straight, normalise, solve_straight
 
 FIRST_ROUND = 16  # histories of each batch in the first round
 FIRST_ROUND_BINNED = 160  # the same with several energies, where adding up a round costs more
+FIRST_STRAIGHT = 1024  # where a history is a direction, and its occupations are solved for
 GROWTH = 0.6  # a round adds at most this share of the histories so far
 ROUND_FLIGHTS = 6e7  # at most about this many flights in a round: half a second on one core
 CHUNKS = 6  # pieces of a round for each worker
@@ -113,7 +115,8 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
                 progress.update(done, error, goal.relative_error, totals.seconds)
             _decide(problem, totals, goal, error)
     if totals.rounds == 0:
-        raise NothingDone(f"stopped before the first round was complete ({totals.stopped_by})")
+        why = totals.trouble or totals.stopped_by
+        raise NothingDone(f"stopped before the first round was complete ({why})")
     return totals
 
 
@@ -168,7 +171,7 @@ def _empty_totals(problem, batches):
 
 def _batch_runner(problem, batches, offsets, stop):
     """A function (batch, first, histories) -> Sample, or words on why it is not whole."""
-    kernel = _kernel(problem)
+    kernel = kernel_of(problem)
 
     def run(batch, first, histories):
         stream = batches[batch]
@@ -180,7 +183,7 @@ def _batch_runner(problem, batches, offsets, stop):
     return run
 
 
-def _kernel(problem):
+def kernel_of(problem):
     """A function (first, histories, offset, stream, stop flag) -> outcome, counts, Sample."""
     common = problem.geometry, problem.spectrum
 
@@ -200,27 +203,40 @@ def _kernel(problem):
         done = status == flights.DONE
         return status, counts, ray_tallies.reduce(problem, counts, histories) if done else None
 
+    def straight(first, histories, offset, stream, flag):
+        counts = ray_tallies.empty_counts(problem)
+        status = solve_straight(
+            first, histories, offset, problem.geometry, space.planes, problem.spectrum, drive,
+            counts, flag,
+        )  # fmt: skip
+        normalise(counts, space.oblique)
+        done = status == flights.DONE
+        return status, counts, ray_tallies.reduce(problem, counts, histories) if done else None
+
     space = problem.space
     if space is None:
         return one_dimension
     drive = ray_tallies.drive_of(problem)
-    return directions
+    return straight if is_straight(problem) else directions
 
 
 def _lost_in(problem, batch, counts):
     """Words on a carrier that took more events than one may."""
-    words = f"carrier {counts.work[flights.HISTORY]} of batch {batch}"
-    if problem.space is not None:
-        place = problem.nodes_nm[counts.work[rays.NODE]]
-        words += f", last at the node at {place:g} nm,"
-    return f"{words} took more than {EVENT_LIMIT:.0e} random numbers"
+    place = None if problem.space is None else problem.nodes_nm[counts.work[rays.NODE]]
+    return too_many(counts.work[flights.HISTORY], batch, place)
+
+
+def too_many(history, batch, place_nm):
+    """Words on a carrier that took more events than one may; place_nm: of the node last met."""
+    where = "" if place_nm is None else f", last seen at {place_nm:g} nm,"
+    return f"carrier {history} of batch {batch}{where} used up {EVENT_LIMIT:.0e} random numbers"
 
 
 def compile_for(problem):
     """Load or compile the variant of the kernels that a problem needs, without a history."""
     stream = new_stream(0, 0) if problem.space is None else new_ray_stream(0, 0)
     flag = np.zeros(1, np.uint8)
-    *_, sample = _kernel(problem)(0, 0, np.uint64(0), stream, flag)
+    *_, sample = kernel_of(problem)(0, 0, np.uint64(0), stream, flag)
     if sample.field is not None:
         sums = np.zeros((3, *sample.field.shape[1:]))
         tallies.add_field(sample.field, 1, sums, sums.copy())
@@ -284,7 +300,8 @@ def _next_round(totals, goal, problem):
     """Histories for each batch in the next round: a function of the totals alone, not of time."""
     batches = totals.histories.size
     done = int(totals.histories.sum())
-    wanted = (FIRST_ROUND if problem.bins is None else FIRST_ROUND_BINNED) * batches
+    first = FIRST_ROUND if problem.bins is None else FIRST_ROUND_BINNED
+    wanted = (FIRST_STRAIGHT if is_straight(problem) else first) * batches
     if done:
         wanted = max(wanted, int(GROWTH * done))
         error = relative_error(problem, totals)

@@ -26,7 +26,7 @@ from carriersim.engine.streams import BLOCK, fill_uniforms, minus_log
 ) = range(9)
 SOURCES = 9
 # Rows of Tally.scalars.
-OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS = range(4)
+OUT_RIGHT, ENERGY_LEFT, ENERGY_RIGHT, FLIGHTS, HISTORY, NODE = range(6)
 
 
 class Base(NamedTuple):
@@ -92,7 +92,7 @@ class Tally(NamedTuple):
     heat: np.ndarray  # (C,) energy given to the lattice
     probe_heat: np.ndarray  # (K,)
     turned: np.ndarray  # (C,) directed flux destroyed by phonons
-    scalars: np.ndarray  # (4,)
+    scalars: np.ndarray  # (6,)
     # With directions: (K, 4) signed sums of 1/|u_x| over carriers that move right before a node,
     # left before it, left behind it, right behind it; (K-1,) u_x that walls take; (V, 2, D) signed
     # crossings by direction, see rays.RayCounts.

@@ -12,6 +12,7 @@ BACKSCATTER = {1: 2.0, 2: np.pi / 2.0, 3: 4.0 / 3.0}
 # Path length per length along the channel of carriers that the cosine law emits, int dO over
 # int u_x dO of a half space.
 OBLIQUE = {1: 1.0, 2: np.pi / 2.0, 3: 2.0}
+LOOKUP = 64  # intervals of the cosine, to find the class of one quickly
 CLASSES = 18  # of direction, equal in angle, from the axis to across the channel
 
 
@@ -69,11 +70,18 @@ def space_of(scenario, nodes_nm, planes, view_nm):
             diffuse=np.array([reflection == "diffuse" for _, reflection in planes]),
             looked_at=view,
             view_edges=edges,
+            view_first=_first_classes(edges),
         ),
         walls=_walls(scenario.channel, every=False),
         faces=_walls(scenario.channel, every=True),
         view_nodes=views,
     )
+
+
+def _first_classes(edges):
+    """The first class that a cosine of each of LOOKUP equal intervals may belong to."""
+    upper = np.append((np.arange(LOOKUP) + 1.0) / LOOKUP, 1.0)
+    return np.searchsorted(-edges[1:-1], -upper, side="right").astype(np.int64)
 
 
 def _walls(channel, every):

@@ -23,7 +23,9 @@ from carriersim.engine.sources import (
     ENERGY_LEFT,
     ENERGY_RIGHT,
     FLIGHTS,
+    HISTORY,
     LEFT_NUMBER,
+    NODE,
     OUT_RIGHT,
     SOURCES,
     Particles,
@@ -105,6 +107,7 @@ def wander(
         densities, lost, views = tally.densities, tally.lost, tally.views
         tunnel, diffuse = planes.tunnel, planes.diffuse
         looked_at, view_edges = planes.looked_at, planes.view_edges
+        view_first = planes.view_first
         whole = walls is not None
         i, j = position[2], position[3]
         uy = uz = across = above = 0.0
@@ -250,6 +253,7 @@ def wander(
                         if stop[0]:
                             return STOPPED
                         if budget < 0:
+                            scalars[HISTORY], scalars[NODE] = history, node
                             return TOO_MANY_EVENTS
                         fill_uniforms(lanes, uniforms)
                         q = 0
@@ -271,7 +275,7 @@ def wander(
                             if planes is not None:
                                 densities[node, 0 if right else 2] += sign * crossing_weight(weight)
                                 if looked_at[node] >= 0 and right == (node == last):
-                                    row = direction_class(abs(ux), view_edges)
+                                    row = direction_class(abs(ux), view_edges, view_first)
                                     views[looked_at[node], 0 if right else 1, row] += sign
                                 normal = chance
                                 if chance < 1.0 and tunnel[node]:
@@ -342,7 +346,7 @@ def wander(
                                 leaves, slant = new_ux, new_weight
                             densities[node, 3 if onward else 1] += sign * crossing_weight(slant)
                             if looked_at[node] >= 0 and onward != (node == last):
-                                row = direction_class(abs(leaves), view_edges)
+                                row = direction_class(abs(leaves), view_edges, view_first)
                                 views[looked_at[node], 0 if onward else 1, row] += sign
                         if node == (last if onward else 0):
                             if onward:
