@@ -21,6 +21,7 @@ import numpy as np
 
 import numpy_elastic
 import relaxing
+import space
 import twin
 from adapters import (
     LEVEL,
@@ -192,6 +193,14 @@ def table() -> dict[str, tuple[Callable, list[Row]]]:
         ),
         "cells": (tally_cost, [Row("elastic d=1, time, 1600 cells against 50", "<=", 1.15)]),
         "relaxing": (relaxing.compare, [Row("relaxing d=1, events/s, against C", ">=", 0.9)]),
+        "space": (
+            partial(space.compare, space.FREE),
+            [Row("elastic d=3 without walls, against C", ">=", 0.9)],
+        ),
+        "walls": (
+            partial(space.compare, space.WALLED),
+            [Row("elastic d=3 with walls, against C", ">=", 0.9)],
+        ),
         "bias": (
             partial(small_bias_error, engine_relative_errors),
             [Row("relative error, eV = kT/100 against 10 kT", "<=", 1.2)],

@@ -42,6 +42,19 @@ def elastic(length, path, cells, histories, seed, points=()) -> dict:
     return json.loads(done.stdout)
 
 
+def space(length, path, cells, histories, seed, side=0.0, specularity=0.0, planes=()) -> dict:
+    """Run the twin of d = 3; returns what it printed.
+
+    side: of a square cross-section, 0 for no walls; planes: (position, transmission, tunnel).
+    """
+    arguments = [repr(length), repr(path), cells, histories, seed, side, side, specularity]
+    arguments += [f"{x!r}:{t!r}" + ":tunnel" * tunnel for x, t, tunnel in planes]
+    done = subprocess.run(
+        [compiled("twin_space"), *map(str, arguments)], stdout=subprocess.PIPE, check=True
+    )
+    return json.loads(done.stdout)
+
+
 def problem_file(problem: dict) -> str:
     """Write a relaxing problem for the twin; kept as long as the bench runs.
 
