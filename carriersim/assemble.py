@@ -1,11 +1,15 @@
 """Totals -> Result: every number of a run with its standard error."""
 
+from dataclasses import replace
+
 import numpy as np
 
 from carriersim import limits
 from carriersim.assemble_relaxed import assemble_relaxed
 from carriersim.constants import BOLTZMANN_MEV_PER_K
 from carriersim.engine.observe import Observer, departure_of, root_of
+from carriersim.engine.observe_space import SpaceObserver
+from carriersim.engine.trajectories import sample_trajectories
 from carriersim.estimates import NOBODY, Numbers, common_reasons, field_arrays, make_result
 from carriersim.jackknife import jackknife
 
@@ -13,30 +17,32 @@ MODES = "the number of modes depends on energy: where there are no states, none 
 NO_ITERATION = "nothing is iterated in an elastic channel"
 
 
-def assemble(problem, totals, scenario):
+def assemble(problem, totals, scenario, endless=None):
     """Result of a finished run.
 
-    scenario: the one to save with it, with the histories that were done. Raises nothing: what has
-    no meaning is None, and `why` tells the reason.
+    scenario: the one to save with it, with the histories that were done. endless: what
+    engine.endless.long_channel gave, in two and three dimensions. Raises nothing: what has no
+    meaning is None, and `why` tells the reason.
     """
     make = _elastic if problem.relaxed is None else assemble_relaxed
     result = make(problem, totals, scenario)
+    if endless is not None:
+        found, why = endless
+        result = replace(result, long_channel=found, why=result.why | why)
     rows = limits.compare(limits.limits_for(problem.scenario), result)
     return result.with_limits(rows)
 
 
 def _elastic(problem, totals, scenario):
-    observer = Observer(problem)
+    observer = Observer(problem) if problem.space is None else SpaceObserver(problem)
     batches = {"histories": totals.histories.astype(float)}
-    value, error = jackknife(
-        observer.scalars,
-        batches | {"transmitted": totals.transmitted, "arrivals": totals.arrivals},
-    )
+    responses = {"transmitted": totals.transmitted, "arrivals": totals.arrivals}
+    value, error = jackknife(observer.scalars, batches | responses | totals.rays)
     for key in ("current", "conductance", "resistance", "differential", "transmission"):
         error[key] = _not_below_one_event(error[key], value[key], totals, problem)
     # A jump or a piece in which nobody was turned back is not known to be 0: one carrier's worth.
     one = abs(value["resistance"]) / totals.histories.sum()
-    error["jumps"] = np.maximum(error["jumps"], one)
+    error["jumps"], error["sums"] = (np.maximum(error[key], one) for key in ("jumps", "sums"))
     if not problem.transparent:  # nor is what a probe reads where all batches agree
         error["probe"] = np.maximum(error["probe"], 1.0 / totals.histories.sum())
         error["four_point"] = np.maximum(error["four_point"], one)
@@ -52,7 +58,8 @@ def _elastic(problem, totals, scenario):
         _reasons(problem, numbers),
         histories=int(totals.histories.sum()),
         residual=None,
-        **_fields(problem, observer, totals, batches),
+        trajectories=sample_trajectories(problem, problem.scenario.simulation.trajectories),
+        **_fields(problem, observer, totals, batches, numbers),
     )
 
 
@@ -71,7 +78,7 @@ def _not_below_one_event(error, value, totals, problem):
 def _reasons(problem, numbers):
     """Why some quantities are null; keys are those of summary.json."""
     window = problem.window
-    why = common_reasons(window, numbers)
+    why = common_reasons(problem.scenario.channel, window, numbers)
     why |= dict.fromkeys(("residual", "drift", "drift_sigma"), NO_ITERATION)
     if not np.isfinite(numbers.value["seebeck"]):
         reason = "no bias without current was found in the energies covered"
@@ -86,9 +93,12 @@ def _reasons(problem, numbers):
     return why
 
 
-def _fields(problem, observer, totals, batches):
+def _fields(problem, observer, totals, batches, numbers):
     """Profiles in every cell and occupations on the output grid, with errors."""
     value, error = jackknife(observer.profiles, batches | {"cells": totals.cells})
+    if problem.space is not None:
+        value["current_by_direction"] = numbers.value["by_direction"]
+        error["current_by_direction"] = numbers.error["by_direction"]
     right, drive = observer.occupation_drive()
     if problem.bins is None:
         occupations, errors, departure, departure_error = _one_bin_fields(

@@ -3,7 +3,7 @@
 import numpy as np
 
 from carriersim.constants import BOLTZMANN_MEV_PER_K
-from carriersim.engine.observe import departure_of, root_of
+from carriersim.engine.observe import departure_of, group_sums, root_of
 from carriersim.engine.observe_relaxed import (
     RelaxedObserver,
     batches_of,
@@ -76,7 +76,11 @@ def _widen(problem, observer, totals, value, error):
         error["probe"] = np.maximum(error["probe"], one)
         error["four_point"] = np.maximum(error["four_point"], one * resistance)
     error["jumps"] = np.maximum(error["jumps"], one * resistance)
-    pieces = np.hypot(error["pieces"], _split_error(problem, observer, totals, value["resistance"]))
+    split = _split_error(problem, observer, totals, value["resistance"])
+    pieces = np.hypot(error["pieces"], split)
+    parts = {"jumps": np.zeros_like(error["jumps"]), "pieces": split + np.zeros_like(pieces)}
+    sums = np.hypot(error["sums"], group_sums(observer.groups.values(), parts))
+    error["sums"] = np.maximum(sums, one * resistance)
     error["pieces"] = np.where(scatters, np.maximum(pieces, one * resistance), pieces)
 
 

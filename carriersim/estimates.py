@@ -14,6 +14,7 @@ from carriersim.result import (
     FourPoint,
     Heat,
     Part,
+    PartSum,
     ProbeReading,
     Result,
     Thermal,
@@ -149,6 +150,7 @@ def _quantities(problem, observer, numbers, why):
         ),
         "differential_resistance_ohm": numbers.one("differential"),
         "breakdown": known("breakdown", lambda: _breakdown(problem, observer, numbers)),
+        "breakdown_sums": known("breakdown", lambda: _breakdown_sums(observer, numbers)),
         "four_point": known(
             "four_point", lambda: _four_points(scenario, numbers.many("four_point"))
         ),
@@ -212,6 +214,18 @@ def _breakdown(problem, observer, numbers):
             )
     parts.append(Part("right interface", "interface", right, position_nm=float(length)))
     return tuple(parts)
+
+
+def _breakdown_sums(observer, numbers):
+    """All parts of a kind together, with errors of their own."""
+    # Parts err together: a sum is known better than the parts' errors would add up to.
+    estimates = _without_rounding(numbers.many("sums"), numbers.value["resistance"])
+    return tuple(
+        PartSum(kind, mechanism, len(jumps) + len(pieces), estimate)
+        for ((kind, mechanism), (jumps, pieces)), estimate in zip(
+            observer.groups.items(), estimates, strict=True
+        )
+    )
 
 
 def _jump_names(problem, jumps):

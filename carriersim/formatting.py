@@ -177,6 +177,13 @@ def order_parts(parts, length_nm: float) -> list:
     return sorted(parts, key=key)
 
 
+def group_name(group):
+    """Name of a PartSum, such as '12 scatterers' or 'elastic, 301 pieces'."""
+    words = {"point": "scatterer", "probe": "probe"}.get(group.kind, "piece")
+    words = f"{group.count} {words}" + "s" * (group.count != 1)
+    return f"{group.mechanism}, {words}" if group.mechanism else words
+
+
 def split_parts(parts, limit: int, keep: int) -> tuple[list, list]:
     """The parts to show one by one, in their order, and the rest: at most `limit`, else the
     `keep` largest. Parts of no resistance at all (ballistic pieces) come to neither list.

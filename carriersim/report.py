@@ -22,6 +22,7 @@ from carriersim.formatting import (
     format_scaled,
     format_seconds,
     format_share,
+    group_name,
     length_scale,
     order_parts,
     split_parts,
@@ -45,6 +46,9 @@ CAUTION = (
 _NARROW = 60  # columns; below, each row of a table takes two lines
 _WIDE = 100  # columns; from here on sources are shown
 _MOST_PARTS, _KEPT_PARTS = 50, 10
+# Of too many parts those are listed one by one that are so large beside R and their like.
+_LEAST_SHARE, _LEAST_RATIO = 0.03, 4.0
+_LEAST_KILOHM = 0.1  # smaller resistances are given in Ω alone
 _MOST_PAIRS = 15  # four-point resistances and probes
 _MOST_LIMITS = 40
 _FAR = 4.0  # standard errors from an exact form that deserve a mark
@@ -60,6 +64,8 @@ _STOPPED = {
     "interrupted": "interrupted",
 }
 _UNITS = (  # the first suffix that fits a key of summary.json
+    ("_uohm_cm", "µΩ cm"),
+    ("_ohm_um", "Ω µm"),
     ("_V_per_K", "V/K"),
     ("_W_per_K", "W/K"),
     ("_A2_per_Hz", "A²/Hz"),
@@ -68,8 +74,17 @@ _UNITS = (  # the first suffix that fits a key of summary.json
     ("_A", "A"),
     ("_S", "S"),
     ("_W", "W"),
+    ("_nm", "nm"),
 )
-_NO_PREFIX = ("mV", "A²/Hz")
+_NO_PREFIX = ("mV", "nm", "A²/Hz")
+
+
+# Quantities that have no meaning in one, two, three dimensions: not worth a reason.
+_MEANINGLESS = {
+    1: {"long_channel", "resistance_width_ohm_um"},
+    2: {"long_channel.resistivity_uohm_cm"},
+    3: {"resistance_width_ohm_um"},
+}
 
 
 def print_result(result, console: Console) -> None:
@@ -80,6 +95,7 @@ def print_result(result, console: Console) -> None:
         page.line(f"Not converged: {unfinished(result)[0]}.", "bold")
     page.table("", _main_rows(result, page))
     _print_breakdown(result, page)
+    _print_long_channel(result, page)
     _print_probes(result, page)
     _print_carriers(result, page)
     heat_shown = _print_heat(result, page)
@@ -221,12 +237,17 @@ def _estimate(estimate, unit=""):
 def _shift(estimate, unit, page):
     """How far noise may have moved an Estimate, such as 'off ≤ 30 Ω', if beside its error that
     matters."""
+    text = _shift_text(estimate, unit)
+    page.shifted |= bool(text)
+    return text
+
+
+def _shift_text(estimate, unit):
     size = abs(estimate.systematic or 0.0) if estimate is not None else 0.0
     if size == 0.0 or size < _SMALL_SHIFT * (estimate.error or 0.0):
         return ""
     if size < ROUNDING * abs(estimate.value):
         return ""
-    page.shifted = True
     return f"off ≤ {_scaled(size, unit, digits=2)}"
 
 
@@ -273,7 +294,22 @@ def _conditions(scenario):
     contacts = format_number(left, "K")
     if left != right:
         contacts = f"{contacts} left and {format_number(right, 'K')} right"
-    return "; ".join([f"{bias}, {contacts}", *_relaxation(scenario)])
+    return "; ".join([f"{bias}, {contacts}", *_shape(scenario.channel), *_relaxation(scenario)])
+
+
+def _shape(channel):
+    """Dimension and cross-section in words; nothing in one dimension."""
+    if channel.dimension == 1:
+        return []
+    words = f"d = {channel.dimension}"
+    if channel.width_nm is None:
+        return [f"{words} without walls"]
+    width, height = (format_number(p) for p in channel.face_specularity)
+    words += f", {format_number(channel.width_nm, 'nm')}"
+    if channel.dimension == 2:
+        return [f"{words} wide, specularity {width}"]
+    words += f" wide, {format_number(channel.height_nm, 'nm')} high, specularity {width}"
+    return [words if width == height else f"{words} (width) and {height} (height)"]
 
 
 def _relaxation(scenario):
@@ -318,8 +354,8 @@ def unfinished(result):
     more = {
         "max_seconds": "raise simulation.max_seconds",
         "windows": "this is the longest run of so many batches: raise simulation.batches",
-        "event_limit": "one carrier takes more than 10^10 steps: paths are too short for the "
-        "length of the channel",
+        "event_limit": f"{result.trouble or 'a carrier takes too many steps'}: paths are too short "
+        "for the length of the channel",
     }
     helps = [more.get(result.stopped_by, "raise simulation.histories"), *keys]
     return "; ".join(reasons) or "stopped before its end", " or ".join(helps)
@@ -361,11 +397,14 @@ def _main_rows(result, page):
 
     resistance = result.resistance_ohm
     add("current", result.current_A, "A")
-    if resistance is not None:
+    if resistance is not None and abs(resistance.value) < _LEAST_KILOHM * 1e3:
+        add("resistance", resistance, "Ω")
+    elif resistance is not None:
         error = math.nan if resistance.error is None else resistance.error
         kilo = format_estimate(resistance.value * 1e-3, error * 1e-3, "kΩ")
         add("resistance", resistance, "Ω", kilo)
         rows.append(["", format_estimate(resistance.value, error, "Ω"), "", ""])
+    add("resistance × width", result.resistance_width_ohm_um, "Ω µm")
     if _differs(result.differential_resistance_ohm, resistance):
         add("differential resistance", result.differential_resistance_ohm, "Ω")
     add("conductance dI/dV", result.conductance_S, "S")
@@ -387,23 +426,90 @@ def _print_breakdown(result, page):
         return
     length_nm = result.scenario.channel.length_nm
     total = sum(part.resistance_ohm.value for part in result.breakdown)
-    parts = order_parts(result.breakdown, length_nm)
-    shown, rest = split_parts(parts, _MOST_PARTS, _KEPT_PARTS)
-    rows = []
-    for part in shown:
-        value = part.resistance_ohm.value
-        place = "" if part.kind == "interface" else format_place(part, length_nm)
-        name = part.mechanism if part.kind == "piece" and part.mechanism else part.name
-        if page.narrow:
-            name, place = f"{name}, {place}" if place else name, ""
-        text, shift = _estimate(part.resistance_ohm, "Ω"), _shift(part.resistance_ohm, "Ω", page)
-        rows.append([name, place, text, format_share(value, total), shift])
-    if rest:
-        value = sum(part.resistance_ohm.value for part in rest)
-        name = f"the other {len(rest)} parts"
-        rows.append([name, "", _scaled(value, "Ω", digits=4), format_share(value, total), ""])
+    shown, sums = _listed(result, total)
+    rows = [_part_row(part, total, length_nm, page) for part in shown]
+    if sums:
+        ends = [row for row, part in zip(rows, shown, strict=True) if part.kind == "interface"]
+        large = [row for row, part in zip(rows, shown, strict=True) if part.kind != "interface"]
+        together = [_row(group_name(group), "", group, total, page) for group in sums]
+        large = [[f"of these: {row[0]}", *row[1:]] for row in large]
+        rows = [*ends[:1], *together, *ends[1:], *large]
     columns = ["part", "place", "resistance", "share", ""]
     page.table("Where the resistance sits", rows, columns, right=(1, 3))
+
+
+def _part_row(part, total, length_nm, page):
+    place = "" if part.kind == "interface" else format_place(part, length_nm)
+    name = part.mechanism if part.kind == "piece" and part.mechanism else part.name
+    if page.narrow:
+        name, place = f"{name}, {place}" if place else name, ""
+    return _row(name, place, part, total, page)
+
+
+def _row(name, place, part, total, page):
+    """name, place, resistance, share and shift of a Part or a PartSum."""
+    estimate = part.resistance_ohm
+    text, shift = _estimate(estimate, "Ω"), _shift(estimate, "Ω", page)
+    return [name, place, text, format_share(estimate.value, total), shift]
+
+
+def _listed(result, total):
+    """Parts to list one by one, and the sums of breakdown_sums where there are too many parts.
+
+    Of too many parts only the contacts and the largest are listed, if they stand out.
+    """
+    parts = order_parts(result.breakdown, result.scenario.channel.length_nm)
+    shown, rest = split_parts(parts, _MOST_PARTS, _KEPT_PARTS)
+    if not rest:
+        return shown, ()
+    sums = result.sums
+    mean = {(s.kind, s.mechanism): abs(s.resistance_ohm.value) / s.count for s in sums}
+
+    def stands_out(part):
+        least = _LEAST_RATIO * mean.get((part.kind, part.mechanism), np.inf)
+        return abs(part.resistance_ohm.value) >= max(_LEAST_SHARE * abs(total), least)
+
+    return [p for p in parts if p.kind == "interface" or (p in shown and stands_out(p))], sums
+
+
+def _print_long_channel(result, page):
+    """What an endless channel of the same kind does, and how that was found."""
+    channel, found = result.scenario.channel, result.long_channel
+    if found is None:
+        return
+    rows = [
+        [name, _estimate(value, unit), _relative(value), _shift_text(value, unit)]
+        for name, value, unit in (
+            ("resistivity / that of the bulk", found.resistivity_ratio, ""),
+            ("resistivity", found.resistivity_uohm_cm, "µΩ cm"),
+            ("sheet resistance", found.sheet_ohm, "Ω"),
+            ("backscattering path", found.backscatter_path_nm, "nm"),
+        )
+        if value is not None
+    ]
+    page.table("An endless channel of this kind", rows)
+    bulk = _bulk(channel, found)
+    if bulk:
+        page.line(bulk)
+    page.line(f"Method: {found.method}.", "dim")
+    if any(row[-1] for row in rows):
+        page.line("off ≤: what longer walks may still change, besides ±", "dim")
+
+
+def _bulk(channel, found):
+    """What the bulk alone would have, and where that comes from, in words."""
+    given, ratio = channel.bulk_resistivity_uohm_cm, found.resistivity_ratio
+    if given is not None:
+        return f"Bulk alone: {format_number(given, 'µΩ cm')}, as given."
+    if ratio is None or not ratio.value:
+        return ""
+    if found.resistivity_uohm_cm is not None:
+        value = format_number(found.resistivity_uohm_cm.value / ratio.value, "µΩ cm", 4)
+        return f"Bulk alone: {value}, computed from R_B A and the path in the bulk."
+    if found.sheet_ohm is not None:
+        value = format_scaled(found.sheet_ohm.value / ratio.value, None, "Ω", 4)
+        return f"Bulk alone: {value} a square, computed from R_B W and the path in the bulk."
+    return ""
 
 
 def _print_probes(result, page):
@@ -572,6 +678,7 @@ def _holds(row):
 def _print_missing(result, page):
     """Each reason once, with the quantities that it takes away."""
     unasked = set() if result.scenario.noise else {"noise"}
+    unasked |= _MEANINGLESS[result.scenario.channel.dimension]
     if not result.relaxes:  # an elastic run iterates nothing
         unasked |= {"residual", "drift", "drift_sigma"}
     by_reason = {}

@@ -43,6 +43,16 @@ class Part:
 
 
 @dataclass(frozen=True)
+class PartSum:
+    """All parts of one kind together: point scatterers, probes, or the pieces of one mechanism."""
+
+    kind: str
+    mechanism: str | None
+    count: int
+    resistance_ohm: Estimate
+
+
+@dataclass(frozen=True)
 class ProbeReading:
     """potential_mV, or potential per unit of the bias when the bias is 0 (linear response)."""
 
@@ -191,6 +201,7 @@ class Result:
     resistance_width_ohm_um: Estimate | None = None
     long_channel: LongChannel | None = None
     trajectories: tuple[Trajectory, ...] = ()
+    breakdown_sums: tuple[PartSum, ...] | None = None  # None where `breakdown` is
     trouble: str | None = None  # which carrier used up its events and where, if one did
     drift: str | None = None  # which frozen field drifted most at the end, and where, in words
     drift_sigma: float | None = None  # by how many standard errors
@@ -200,6 +211,19 @@ class Result:
         """Whether energies change inside the channel: relaxation or a probe that takes carriers."""
         coupled = any(probe.coupling > 0.0 for probe in self.scenario.probes)
         return coupled or bool(self.scenario.relaxation.mechanisms)
+
+    @property
+    def sums(self):
+        """breakdown_sums, without errors where an older file does not have them."""
+        if self.breakdown_sums is not None:
+            return self.breakdown_sums
+        found = {}
+        for part in self.breakdown or ():
+            if part.kind != "interface" and part.mechanism != "ballistic":
+                found.setdefault((part.kind, part.mechanism), []).append(part.resistance_ohm.value)
+        return tuple(
+            PartSum(*key, len(values), Estimate(sum(values), None)) for key, values in found.items()
+        )
 
     def with_limits(self, rows):
         """The same result with other rows of closed forms."""

@@ -20,6 +20,7 @@ from carriersim.result import (
     LongChannel,
     Noise,
     Part,
+    PartSum,
     ProbeReading,
     Result,
     Thermal,
@@ -256,6 +257,12 @@ def summary(result):
     data["breakdown"] = (
         None if result.breakdown is None else [_part(part) for part in result.breakdown]
     )
+    if result.breakdown_sums is not None:
+        data["breakdown_sums"] = [
+            {"kind": s.kind, "mechanism": s.mechanism, "count": s.count}
+            | {"resistance_ohm": _plain(s.resistance_ohm)}
+            for s in result.breakdown_sums
+        ]
     data["four_point"] = (
         None
         if result.four_point is None
@@ -312,6 +319,7 @@ def open_result(directory):
         why=data["why"],
         trouble=data.get("trouble"),
         breakdown=_read_list(data["breakdown"], _read_part),
+        breakdown_sums=_read_list(data.get("breakdown_sums"), _read_sum),
         four_point=_read_list(
             data["four_point"],
             lambda f: FourPoint(f["from_nm"], f["to_nm"], _read_estimate(f["resistance_ohm"])),
@@ -350,6 +358,10 @@ def _read_part(data):
     data = dict(data)
     estimate = _read_estimate(data.pop("resistance_ohm"))
     return Part(name=data.pop("part"), resistance_ohm=estimate, **data)
+
+
+def _read_sum(data):
+    return PartSum(**(data | {"resistance_ohm": _read_estimate(data["resistance_ohm"])}))
 
 
 def _read_group(kind, data):

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from rich.console import Console
 
+import carriersim as cs
 from carriersim import limits, report
 from carriersim.formatting import (
     ascii_text,
@@ -21,7 +22,8 @@ from carriersim.formatting import (
 )
 from carriersim.report import format_estimate, print_limits, print_result
 from carriersim.result import Estimate, LimitRow, Part
-from tests.fake_results import fake_result, limit_row, relaxing_result
+from carriersim.scenario import read_text
+from tests.fake_results import RIBBON, WIRE, fake_result, limit_row, relaxing_result, space_result
 
 
 def printed(result, width=80, encoding="utf-8"):
@@ -136,12 +138,65 @@ def test_sources_appear_only_where_there_is_room():
     assert "[1]" in wide
 
 
-def test_many_parts_are_summed():
+def rows_of(result, title="Where the resistance sits"):
+    """Rows of a table: texts between runs of spaces."""
+    text = printed(result, 120).partition(f"{title}\n")[2].partition("\n\n")[0]
+    return [re.split(r"\s{2,}", row.strip()) for row in text.splitlines()[1:]]
+
+
+def test_many_parts_are_summed_by_kind():
     places = [{"position_nm": float(i + 1), "transmission": 0.9} for i in range(60)]
-    text = printed(fake_result(changes={"scattering.points": places}))
-    block = text.partition("Where the resistance sits")[2].partition("\n\n")[0]
-    assert len(block.splitlines()) == 2 + 10 + 1
-    assert block.splitlines()[-1].startswith("the other ")
+    result = fake_result(changes={"scattering.points": places})
+    rows = rows_of(result)
+    names = ["left interface", "60 scatterers", "backscattering, 61 pieces", "right interface"]
+    assert sorted(row[0] for row in rows) == sorted(names)
+    assert (rows[0][0], rows[3][0]) == (names[0], names[3])
+    # 60 (1 - T)/T of h/2e^2 (Datta 1995).
+    own = next(row for row in rows if row[0] == "60 scatterers")
+    assert float(own[1].removesuffix(" kΩ").split()[0]) == pytest.approx(60 * 12.9064 / 9, rel=2e-3)
+    shares = [float(row[-1].removesuffix(" %")) for row in rows]
+    assert sum(shares) == pytest.approx(100.0, abs=0.3)
+
+
+def test_a_part_that_stands_out_is_named_among_many():
+    places = [{"position_nm": float(i + 1), "transmission": 0.9} for i in range(60)]
+    places[30]["transmission"] = 0.3
+    result = fake_result(
+        changes={"scattering.points": places, "scattering.backscatter_path_nm": None}
+    )
+    names = [row[0] for row in rows_of(result)]
+    ends = "left interface", "right interface"
+    assert names == [ends[0], "60 scatterers", ends[1], "of these: scatterer 31"]
+
+
+def test_sums_of_a_run_have_errors_of_their_own():
+    """Of 60 scatterers that all count the same carriers, the sum is better known than the parts."""
+    text = """
+channel: {length_nm: 61, dimension: 1}
+contacts: {bias_mV: 1, temperature_K: 4}
+scattering: {backscatter_path_nm: 500, points: [PLACES]}
+simulation: {histories: 20000}
+"""
+    places = ", ".join(f"{{position_nm: {i + 1}, transmission: 0.9}}" for i in range(60))
+    result = cs.simulate(read_text(text.replace("PLACES", places)), workers=1)
+    points, pieces = result.breakdown_sums
+    assert (points.kind, points.count, pieces.mechanism, pieces.count) == (
+        "point",
+        60,
+        "elastic",
+        61,
+    )
+    for group in (points, pieces):
+        own = [p.resistance_ohm for p in result.breakdown if p.kind == group.kind]
+        total = group.resistance_ohm
+        assert total.value == pytest.approx(sum(p.value for p in own), rel=1e-9)
+        assert 0.0 < total.error < sum(p.error for p in own)
+    # 60 (1 - T)/T and L/lam of h/2e^2 (Datta 1995).
+    for group, expected in ((points, 60 / 9), (pieces, 61 / 500)):
+        estimate = group.resistance_ohm
+        assert abs(estimate.value - expected * 12906.40372) < 4 * estimate.error
+    names = [row[0] for row in rows_of(result)]
+    assert names[1:3] == ["60 scatterers", "elastic, 61 pieces"]
 
 
 def test_split_parts_keeps_order_and_drops_nothing_that_counts():
@@ -397,6 +452,104 @@ def test_relaxing_runs_fit_any_width(width, encoding):
     assert "off <= " in text or "off ≤ " in text
 
 
+# Two and three dimensions.
+
+
+def endless(result):
+    text = printed(result, 120)
+    return text.partition("An endless channel of this kind\n")[2].partition("\n\n")[0]
+
+
+def test_conditions_tell_dimension_and_walls():
+    bias = "bias 10 mV, 300 K; "
+    ribbon, wire = space_result().scenario, space_result(WIRE).scenario
+    assert report._conditions(ribbon) == f"{bias}d = 2, 30 nm wide, specularity 0"
+    assert report._conditions(wire) == f"{bias}d = 3, 30 nm wide, 20 nm high, specularity 0.2"
+    film = wire.replace({"channel.specularity": {"width": 1, "height": 0.1}})
+    words = "specularity 1 (width) and 0.1 (height)"
+    assert report._conditions(film) == f"{bias}d = 3, 30 nm wide, 20 nm high, {words}"
+    bare = ribbon.replace({"channel.width_nm": None, "channel.specularity": None})
+    assert report._conditions(bare) == f"{bias}d = 2 without walls"
+
+
+def test_walls_are_a_mechanism_of_the_breakdown():
+    rows = rows_of(space_result())
+    assert [row[:2] for row in rows] == [
+        ["left interface", "1.2934 ± 0.0039 kΩ"],
+        ["elastic", "0 – 120 nm"],
+        ["walls", "0 – 120 nm"],
+        ["scatterer 1", "120 nm"],
+        ["elastic", "120 – 300 nm"],
+        ["walls", "120 – 300 nm"],
+        ["right interface", "1.2888 ± 0.0039 kΩ"],
+    ]
+
+
+def test_hundreds_of_planes_take_one_row():
+    places = [{"position_nm": 1.5 * (i + 1), "transmission": 0.9} for i in range(300)]
+    rows = rows_of(space_result(WIRE, {"scattering.points": places}))
+    names = [row[0] for row in rows]
+    # 500 nm over 78 nm of the fake, and 300 planes of 1/9 each.
+    assert set(names[1:4]) == {"300 scatterers", "elastic, 301 pieces", "walls, 301 pieces"}
+    assert len(names) == 5
+
+
+def test_resistance_times_width():
+    result = space_result()
+    text = printed(result, 100)
+    ohm_um = result.resistance_ohm.value * 0.03
+    (row,) = [row for row in text.splitlines() if row.startswith("resistance × width")]
+    assert float(row.split()[3]) == pytest.approx(ohm_um, rel=1e-3)
+    assert "Ω µm" in row and "0.3 %" in row
+    assert "× width" not in printed(space_result(WIRE)) + printed(fake_result())
+
+
+def test_an_endless_wire():
+    lines = endless(space_result(WIRE)).splitlines()
+    assert [re.split(r"\s{2,}", line.strip()) for line in lines[:4]] == [
+        ["resistivity / that of the bulk", "1.5000 ± 0.0040", "0.27 %", "off ≤ 0.001"],
+        ["resistivity", "3.0000 ± 0.0080 µΩ cm", "0.27 %"],
+        ["sheet resistance", "60.00 ± 0.16 Ω", "0.27 %"],
+        ["backscattering path", "80.00 ± 0.20 nm", "0.25 %"],
+    ]
+    assert lines[4:] == [
+        "Bulk alone: 2 µΩ cm, computed from R_B A and the path in the bulk.",
+        "Method: spread of 12800 carriers' walks of 900 nm.",
+        "off ≤: what longer walks may still change, besides ±",
+    ]
+
+
+def test_where_the_resistivity_of_the_bulk_comes_from():
+    given = space_result(WIRE, {"channel.bulk_resistivity_uohm_cm": 1.68})
+    assert "Bulk alone: 1.68 µΩ cm, as given." in endless(given)
+    sheet = "Bulk alone: 40 Ω a square, computed from R_B W and the path in the bulk."
+    assert sheet in endless(space_result())
+    block = endless(space_result())
+    assert "µΩ cm" not in block
+    ballistic = dataclasses.replace(space_result().long_channel, resistivity_ratio=None)
+    assert "Bulk" not in endless(space_result(long_channel=ballistic))
+
+
+def test_without_an_endless_channel_there_is_a_reason():
+    why = {"long_channel": "interrupted", "resistance_width_ohm_um": "no width"}
+    text = printed(space_result(long_channel=None, why=why))
+    assert "An endless channel" not in text
+    assert "long_channel: interrupted" in text and "resistance_width_ohm_um: no width" in text
+    # In one dimension nobody asks.
+    text = printed(fake_result(why=why))
+    assert "long_channel" not in text and "resistance_width_ohm_um" not in text
+
+
+@pytest.mark.parametrize("width", [40, 60, 80, 140])
+@pytest.mark.parametrize("encoding", ["utf-8", "ascii"])
+@pytest.mark.parametrize("text", [RIBBON, WIRE], ids=["ribbon", "wire"])
+def test_more_dimensions_fit_any_width(text, width, encoding):
+    lines = printed(space_result(text), width, encoding)
+    assert max(map(len, lines.splitlines())) <= width
+    assert lines.isascii() == (encoding == "ascii")
+    assert "?" not in lines
+
+
 def test_differential_resistance_only_if_it_differs():
     result = fake_result()
     same = dataclasses.replace(result, differential_resistance_ohm=result.resistance_ohm)
@@ -430,6 +583,11 @@ def test_missing_errors_and_values():
         ("thermal.conductance_W_per_K", "W/K"),
         ("thermal.conductance_W_per_K / (conductance_S * T), W ohm/K^2", "W Ω/K²"),
         ("transmission", ""),
+        ("resistance_width_ohm_um", "Ω µm"),
+        ("long_channel.resistivity_uohm_cm", "µΩ cm"),
+        ("long_channel.sheet_ohm", "Ω"),
+        ("long_channel.backscatter_path_nm", "nm"),
+        ("long_channel.resistivity_ratio", ""),
     ],
 )
 def test_units_of_limits(quantity, unit):

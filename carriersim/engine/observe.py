@@ -33,6 +33,7 @@ class Observer:
             self.finer = -(-FEWEST_ENERGIES // self.grid.count)
             self.grid = Bins(cut_in_parts(self.grid.edges, self.finer), self.window.breaks())
         self.root_meV, self.root_functionals = None, None
+        self.groups = part_groups(self)
 
     def scalars(self, totals):
         """Numbers, probes and breakdown; totals: histories, transmitted (B,), arrivals (K, 2)."""
@@ -60,6 +61,7 @@ class Observer:
             }
             result |= self._thermal(t)
             result |= self._parts(totals, t, resistance)
+        result["sums"] = group_sums(self.groups.values(), result)
         return result
 
     def _thermal(self, t):
@@ -237,6 +239,29 @@ def parts_of(before, after, cuts, jumps, shares, resistance):
         "jumps": (before - after)[jumps] * resistance,
         "pieces": np.concatenate([p * s for p, s in zip(pieces, shares, strict=True)]) * resistance,
     }
+
+
+def part_groups(observer):
+    """Which jumps and pieces of a breakdown belong together: {(kind, mechanism): (jumps, pieces)}.
+
+    jumps, pieces: indices into these arrays of parts_of. In the order in which they are met.
+    """
+    groups = {}
+    for index, node in enumerate(np.flatnonzero(observer.jumps)):
+        kind = "point" if observer.problem.is_scatterer[node] else "probe"
+        groups.setdefault((kind, None), ([], []))[0].append(index)
+    piece = 0
+    for node in observer.cuts()[:-1]:
+        for mechanism in observer.turning(node) or [None]:
+            if mechanism is not None:  # nothing falls where nothing scatters
+                groups.setdefault(("piece", mechanism), ([], []))[1].append(piece)
+            piece += 1
+    return groups
+
+
+def group_sums(groups, parts):
+    """Resistance of each of part_groups, from the arrays of parts_of."""
+    return np.array([parts["jumps"][j].sum() + parts["pieces"][p].sum() for j, p in groups])
 
 
 def pair_differences(reading):

@@ -22,7 +22,9 @@ from carriersim.engine.observe import (
     ballistic_ohm,
     cut_in_parts,
     cuts_of,
+    group_sums,
     pair_differences,
+    part_groups,
     parts_of,
 )
 from carriersim.jackknife import jackknife
@@ -52,6 +54,7 @@ class RelaxedObserver:
         self.grid = Bins(cut_in_parts(self.edges_meV, self.finer), np.empty(0))
         self.pieces = self._piece_cells()
         self.rates = [self._rates(*piece, field_sum) for piece in self.pieces]
+        self.groups = part_groups(self)
 
     # What stands where
 
@@ -105,7 +108,9 @@ class RelaxedObserver:
                 "seebeck": np.nan,
                 "thermal_conductance": np.nan,
             }
-            return numbers | self.powers(t) | self._potentials(t) | self.parts(t, resistance)
+            parts = self.parts(t, resistance)
+            parts["sums"] = group_sums(self.groups.values(), parts)
+            return numbers | self.powers(t) | self._potentials(t) | parts
 
     def _slope(self, t, flux):
         """d(int j dE)/d(mu_L), nan where it is not known."""

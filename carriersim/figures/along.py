@@ -76,7 +76,8 @@ def _scatterers(ax, result, x, style, labels):
     if labels and few:
         _transmissions(ax, where / x.length, [value for _, value in marks], style)
     elif labels:
-        text = f"{len(marks)} point scatterers ({'grey lines' if some else 'ticks along the top'})"
+        name = "point scatterers" if result.scenario.channel.dimension == 1 else "planes"
+        text = f"{len(marks)} {name} ({'grey lines' if some else 'ticks along the top'})"
         ax.text(0.5, 1.03, text, transform=ax.transAxes, ha="center", va="bottom",
                 fontsize=style.small, color=style.soft)  # fmt: skip
 

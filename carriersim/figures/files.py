@@ -2,7 +2,16 @@
 
 from pathlib import Path
 
-from carriersim.figures import departure, heat, occupation, profile, resistance, temperatures
+from carriersim.figures import (
+    departure,
+    directions,
+    heat,
+    occupation,
+    profile,
+    resistance,
+    temperatures,
+    trajectories,
+)
 from carriersim.figures.style import STYLE, Style, own_settings
 
 _FIGURES = {
@@ -12,6 +21,8 @@ _FIGURES = {
     "departure": departure.make_figure,
     "temperatures": temperatures.make_figure,
     "heat": heat.make_figure,
+    "directions": directions.make_figure,
+    "trajectories": trajectories.make_figure,
 }
 # Without versions and dates in the files the same result gives the same bytes. Light compression
 # costs a tenth in size and saves two thirds of the time of writing.
@@ -26,7 +37,8 @@ def save_all(result, directory, style: Style = STYLE) -> list[Path]:
 
     Returns the paths written. `resistance` is left out where there is no breakdown (the reason is
     in `result.why`); `departure`, `temperatures` and `heat` are drawn where energies relax at a
-    bias. The same result gives the same bytes. Raises OSError where it cannot write.
+    bias, `directions` and `trajectories` in two and three dimensions. The same result gives the
+    same bytes. Raises OSError where it cannot write.
     """
     directory = Path(directory)
     written = []

@@ -74,6 +74,8 @@ def _closed_form(scenario, x_nm):
     """(mu+, mu-) at x_nm. Raises ValueError where relaxation leaves no closed form."""
     from carriersim import limits
 
+    if scenario.channel.dimension != 1:
+        return limits.space_profile(scenario, x_nm)
     coupled = any(probe.coupling > 0.0 for probe in scenario.probes)
     if coupled or scenario.relaxation.mechanisms:
         scenario = limits.number_transport(scenario)

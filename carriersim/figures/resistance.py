@@ -6,6 +6,7 @@ from carriersim.figures.rows import COLUMNS, SHOWN_ERROR, error_of, value_of, wr
 from carriersim.figures.style import STYLE, Style, dress, new_figure, place, thin, ticks, write
 from carriersim.formatting import (
     format_place,
+    group_name,
     length_scale,
     order_parts,
     split_parts,
@@ -13,7 +14,6 @@ from carriersim.formatting import (
 )
 
 _MOST_ROWS = 12
-_KEPT_ROWS = 11
 _MOST_SEGMENTS = 2000  # of more parts only the outline is drawn along the channel
 _TOP, _ROW, _BETWEEN, _LOWER, _BOTTOM = 0.3, 0.26, 0.78, 1.75, 0.5  # heights in inches
 _LONGEST_NAME = 34  # letters of a part with its place; of longer names the end is cut
@@ -51,13 +51,14 @@ def _scale(parts):
 
 
 def _rows(parts, result):
-    """(label, estimate or value, kind) of each row; the last one may sum many parts."""
-    shown, rest = split_parts(parts, _MOST_ROWS, _KEPT_ROWS)
+    """(label, estimate, kind) of each row; of many parts the sums of each kind."""
     length = result.scenario.channel.length_nm
-    rows = [(_label(part, length), part.resistance_ohm, part.kind) for part in shown]
-    if rest:
-        rows.append((f"the other {len(rest)} parts", sum(_values(rest)), "rest"))
-    return rows
+    with_resistance, rest = split_parts(parts, _MOST_ROWS, _MOST_ROWS)
+    if not rest:
+        return [(_label(part, length), part.resistance_ohm, part.kind) for part in with_resistance]
+    sums = [(group_name(s), s.resistance_ohm, s.kind) for s in result.sums]
+    ends = [(p.name, p.resistance_ohm, p.kind) for p in parts if p.kind == "interface"]
+    return [*ends[:1], *sums, *ends[1:]]
 
 
 def _label(part, length_nm):
@@ -77,7 +78,7 @@ def draw(ax, result, style: Style = STYLE):
     """Draw the parts as steps of one staircase from 0 to R; return the axes.
 
     One row for each part from left to right along the channel, with value, error and share; of more
-    than 12 parts the 11 largest, and the others summed. Whiskers: one standard error. Raises
+    than 12 parts the contacts and the sum of each kind. Whiskers: one standard error. Raises
     ValueError where the result has no breakdown.
     """
     if not _has_parts(result):
@@ -97,10 +98,8 @@ def draw(ax, result, style: Style = STYLE):
         reached += value_of(estimate)
     at = np.arange(len(rows))
     ends = np.add(starts, sizes)
-    bars = ax.barh(at, sizes, left=starts, height=0.66, color=colours, ec=style.ink, lw=0.6,
+    ax.barh(at, sizes, left=starts, height=0.66, color=colours, ec=style.ink, lw=0.6,
                    zorder=3)  # fmt: skip
-    if rows[-1][2] == "rest":
-        bars[-1].set(hatch="////", facecolor="white")
     ax.vlines(ends[:-1], at[:-1] + 0.33, at[1:] - 0.33, color=style.soft, lw=0.7)
     seen = np.nan_to_num(errors) > SHOWN_ERROR * total * factor
     if seen.any():

@@ -61,6 +61,7 @@ from carriersim.limits.landauer import (
     mean_transmission,
     resistance_ohm,
 )
+from carriersim.limits.listing_space import space_profile
 from carriersim.limits.number_transport import number_transport
 from carriersim.limits.potentials import profile, response
 from carriersim.limits.relaxation import (
@@ -145,6 +146,7 @@ __all__ = [
     "simple_transmission",
     "slab_profile",
     "slab_transmission",
+    "space_profile",
     "stretch_resistance",
     "thermal_conductance_W_per_K",
     "thermoelectric_integrals",

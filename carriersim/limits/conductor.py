@@ -172,6 +172,14 @@ def read(scenario):
     )
 
 
+def read_line(scenario):
+    """The same for what holds along a line only; ValueError in two and three dimensions."""
+    conductor = read(scenario)
+    if conductor.scenario.channel.dimension != 1:
+        raise ValueError("the series law gives potentials in one dimension only")
+    return conductor
+
+
 def transmission(scenario, energy_meV):
     """T(E) = 1/(1 + sum of len/lam(E) + sum of (1 - T_i(E))/T_i(E)), shape of energy_meV.
 

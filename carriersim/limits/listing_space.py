@@ -35,7 +35,12 @@ from carriersim.limits.listing import (
 )
 from carriersim.limits.number_transport import has_coupled_probe
 from carriersim.limits.rows import Limit, of_result
-from carriersim.limits.slab import BACKSCATTER, interface_part, slab_transmission
+from carriersim.limits.slab import (
+    BACKSCATTER,
+    interface_part,
+    slab_profile,
+    slab_transmission,
+)
 from carriersim.limits.thermal import without_current
 from carriersim.limits.walls import (
     film_conductivity_ratio,
@@ -67,6 +72,22 @@ def space_limits(scenario) -> Iterator[Limit]:
     yield from _simple(case)
     yield from _any_transmission(case)
     yield from _long_channel(case)
+
+
+def space_profile(scenario, x_nm):
+    """(mu_plus, mu_minus) in d = 2 and 3: meV, or per unit of the bias when the bias is 0.
+
+    Where bulk scattering is alone, see slab_profile; otherwise ValueError. x_nm of any shape.
+    """
+    case = _Case(scenario)
+    inelastic = has_coupled_probe(scenario) or bool(scenario.relaxation.mechanisms)
+    if inelastic or case.rough or case.planes or read(scenario).depends_on_energy:
+        raise ValueError("potentials have a closed form for bulk scattering alone")
+    counted = np.array([case.thickness_up_to(x) for x in np.ravel(x_nm)]).reshape(np.shape(x_nm))
+    fraction = counted / case.thickness if case.thickness else 0.0 * counted
+    level = scenario.contacts.bias_mV or 1.0
+    right, left = slab_profile(case.thickness, case.dimension, fraction)
+    return level * right, level * left
 
 
 class _Case:
@@ -110,11 +131,16 @@ class _Case:
     @cached_property
     def thickness(self):
         """Mean free paths in the channel."""
+        return self.thickness_up_to(self.length_nm)
+
+    def thickness_up_to(self, x_nm):
+        """Mean free paths between the left contact and x."""
         sections = self.scenario.scattering.sections
-        lengths = [section.to_nm - section.from_nm for section in sections]
-        total = sum(self.rates.values()) * max(0.0, self.length_nm - sum(lengths))
-        for section, length in zip(sections, lengths, strict=True):
-            total += sum(self._rates(section).values()) * length
+        spans = [(min(s.from_nm, x_nm), min(s.to_nm, x_nm), s) for s in sections]
+        rest = max(0.0, x_nm - sum(to_nm - from_nm for from_nm, to_nm, _ in spans))
+        total = sum(self.rates.values()) * rest
+        for from_nm, to_nm, section in spans:
+            total += sum(self._rates(section).values()) * (to_nm - from_nm)
         return total
 
     @property

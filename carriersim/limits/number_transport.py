@@ -10,7 +10,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from carriersim.limits.conductor import Stretch, read
+from carriersim.limits.conductor import Stretch, read, read_line
 from carriersim.limits.formulas import point_resistance, probe_reading, stretch_resistance
 from carriersim.limits.potentials import profile_of
 from carriersim.limits.relaxation import (
@@ -41,7 +41,7 @@ def number_transport(scenario):
     and `contact_heat_W` are not, since relaxation changes energies. Raises ValueError where
     energies matter: tables, optical phonons.
     """
-    conductor = read(scenario)
+    conductor = read_line(scenario)
     if conductor.with_relaxation:
         return conductor
     if energy_matters(conductor):

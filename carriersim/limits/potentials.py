@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from carriersim.limits.conductor import read
+from carriersim.limits.conductor import read, read_line
 from carriersim.limits.energies import main_drive
 from carriersim.limits.landauer import mean_modes
 
@@ -17,7 +17,7 @@ def response(scenario, x_nm, energy_meV):
     (Landauer 1970; Datta 1995). x_nm in [0, L], just inside the interfaces; exactly at a scatterer
     the mean of both sides.
     """
-    conductor = read(scenario)
+    conductor = read_line(scenario)
     energy_meV = np.atleast_1d(np.asarray(energy_meV, float))
     by_law = np.array([law(energy_meV) for law in conductor.laws])
     resistance = by_law.T @ conductor.amounts_up_to(np.atleast_1d(x_nm))
@@ -64,7 +64,7 @@ def profile(scenario, x_nm):
     of x_nm, 0 <= x <= L just inside the interfaces; at a scatterer the mean of both sides. Time is
     proportional to scatterers + places, with one integral for each different table.
     """
-    conductor = read(scenario)
+    conductor = read_line(scenario)
     return profile_of(levels(conductor), conductor, x_nm)
 
 
