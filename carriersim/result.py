@@ -194,7 +194,8 @@ class Result:
     lattice_power_W_per_nm: np.ndarray
     errors: dict[str, np.ndarray] = field(default_factory=dict)
     # Two and three dimensions: places, angles to the axis (D,), and (V, 2, D) the current in A per
-    # degree (at bias 0 or unequal temperatures dI/dV in S) of carriers moving right, left.
+    # degree (at bias 0, and at unequal temperatures without relaxation, dI/dV in S) of carriers
+    # moving right, left.
     view_nm: np.ndarray | None = None
     direction_deg: np.ndarray | None = None
     current_by_direction: np.ndarray | None = None
