@@ -74,6 +74,7 @@ def cross(
     first_cell, cells, length_nm = geometry.first_cell, geometry.cells, geometry.length_nm
     per_nm_of = cells / length_nm
     rate_of = geometry.thickness / length_nm
+    free_of = np.where(rate_of > 0.0, 1.0 / rate_of, FAR)
     tunnel, diffuse = planes.tunnel, planes.diffuse
     view, view_edges, view_first = planes.looked_at, planes.view_edges, planes.view_first
     last = geometry.transmission.size - 1
@@ -87,11 +88,11 @@ def cross(
         work[BUDGET] = event_limit
         if spectrum is not None:
             b, energy = draw_energy(history, offset, spectrum)
-        if j >= BLOCK:
-            fill_lambert(lanes, lambert, dimension, whole)
-            j = 0
         ux = emitted_cosine(history, offset, dimension)
         if walls is not None:
+            if j >= BLOCK:
+                fill_lambert(lanes, lambert, dimension, whole)
+                j = 0
             if q > BLOCK - 2:
                 fill_uniforms(lanes, uniforms)
                 q = 0
@@ -103,7 +104,7 @@ def cross(
             if second is not None:
                 z = second.size * uniforms[q]
                 q += 1
-        j += 1
+            j += 1
         if e >= BLOCK:
             fill_exponentials(lanes, exponentials)
             e = 0
@@ -121,11 +122,12 @@ def cross(
             counted = crossing_weight(weight)
             crossings[b, node, RIGHT_BEFORE if right else LEFT_BEHIND] += counted
             seen = view[node]
-            if seen >= 0 and right == (node == last):
-                row = direction_class(abs(ux), view_edges, view_first)
-                views[seen, 0 if right else 1, row] += drive[b]
             chance = passes(node, b, energy, geometry, spectrum)
             turned = False
+            # Looked at just behind a node, at the last one just before it.
+            if seen >= 0 and (chance == 1.0 or right == (node == last)):
+                row = direction_class(abs(ux), view_edges, view_first)
+                views[seen, 0 if right else 1, row] += drive[b]
             if chance < 1.0:
                 if q >= BLOCK:
                     outcome = _may_go_on(work, stop, node)
@@ -174,11 +176,11 @@ def cross(
                         grazes = False
                 counted = crossing_weight(weight)
                 crossings[b, node, RIGHT_BEHIND if right else LEFT_BEFORE] += counted
+                if seen >= 0 and right != (node == last):
+                    row = direction_class(abs(ux), view_edges, view_first)
+                    views[seen, 0 if right else 1, row] += drive[b]
             if born:
                 fresh[b, 0 if right else 1] += counted
-            if seen >= 0 and right != (node == last):
-                row = direction_class(abs(ux), view_edges, view_first)
-                views[seen, 0 if right else 1, row] += drive[b]
             if node == (last if right else 0):
                 if record is not None:
                     record(ENDED, segment, x, y, z)
@@ -188,9 +190,10 @@ def cross(
             segment = node if right else node - 1
             length, base, count = length_nm[segment], first_cell[segment], cells[segment]
             per_nm, rate = per_nm_of[segment], rate_of[segment]
+            free = free_of[segment]
             if spectrum is not None:
                 rate = optical_thickness(segment, b, energy, geometry, spectrum) / length
-            free = 1.0 / rate if rate > 0.0 else FAR
+                free = 1.0 / rate if rate > 0.0 else FAR
             x = 0.0 if right else length
             before = weight
             if walls is None and (grazes or rate == 0.0):

@@ -20,6 +20,8 @@ BLOCK = 128  # numbers per refill: states and buffers take 6 kB, so tallies fit 
 TRANSPORT = 1
 OFFSET = 2
 TANGENT = 3
+ENDLESS = 4
+TRAJECTORIES = 5
 
 _LN2_HIGH = 6.93147180369123816490e-01  # upper 33 bits of ln 2: exponent * _LN2_HIGH is exact
 _LN2_LOW = 1.90821492927058770002e-10  # ln 2 - _LN2_HIGH

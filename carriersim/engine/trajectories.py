@@ -13,9 +13,9 @@ from carriersim.engine import ray_tallies, rays
 from carriersim.engine.directions import new_ray_stream
 from carriersim.engine.planes import Walls
 from carriersim.engine.solve import EVENT_LIMIT
+from carriersim.engine.streams import TRAJECTORIES
 from carriersim.result import Trajectory
 
-PURPOSE = 5  # of streams.py: sets these random numbers apart
 MOST_EVENTS = 2000  # recorded of one carrier, which is then left where it is
 MOST_IN_ALL = 20_000  # events after which no more carriers are tried: about 0.2 s
 MOST_CARRIERS = 1000  # that are tried
@@ -81,7 +81,7 @@ def _follower(problem):
             if len(kinds) >= MOST_EVENTS:
                 raise _Enough
 
-        stream = new_ray_stream(seed, number, PURPOSE)
+        stream = new_ray_stream(seed, number, TRAJECTORIES)
         with suppress(_Enough):
             rays.cross.py_func(
                 number, 1, offset, problem.geometry, space.planes, *faces, spectrum, drive,
@@ -97,7 +97,7 @@ def _follower(problem):
 
 def _offset(seed):
     """Shift of the sequence that spreads energies and first directions, uint64."""
-    sequence = np.random.SeedSequence(seed, spawn_key=(PURPOSE,))
+    sequence = np.random.SeedSequence(seed, spawn_key=(TRAJECTORIES,))
     return sequence.generate_state(1, np.uint64)[0]
 
 

@@ -1,71 +1,88 @@
 """Compile every variant of the kernels once: `python -m carriersim.engine.warmup`.
 
 Several processes that compile the same function for the first time race on the cache files, so
-whoever starts many processes runs this first.
+whoever starts many processes runs this first. It uses two itself, which share next to nothing.
 """
 
-from carriersim.engine import rounds
-from carriersim.engine.deviation import deviation_of
-from carriersim.engine.problem import build
-from carriersim.engine.solve import StopRequest, compile_for
-from carriersim.scenario import read_text
+from concurrent.futures import ProcessPoolExecutor
+from multiprocessing import get_context
 
-VARIANTS = {
-    "constant": "{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}}",
-    "tables": """
-channel: {length_nm: 1, modes: {energy_meV: [0, 1], value: [1, 2]}}
-contacts: {bias_mV: 1, temperature_K: 1}
-""",
-    "directions": """
-channel: {length_nm: 1, dimension: 3}
-contacts: {bias_mV: 1, temperature_K: 1}
-""",
-    "directions, one pair of walls": """
-channel: {length_nm: 1, dimension: 2, width_nm: 1, specularity: 0}
-contacts: {bias_mV: 1, temperature_K: 1}
-""",
-    "directions, two pairs of walls": """
-channel: {length_nm: 1, dimension: 3, width_nm: 1, height_nm: 1, specularity: 0}
-contacts: {bias_mV: 1, temperature_K: 1}
-""",
-    "directions, tables": """
-channel: {length_nm: 1, dimension: 3}
-contacts: {bias_mV: 1, temperature_K: 1}
-scattering: {mean_free_path_nm: {energy_meV: [0, 1], value: [1, 2]}}
-""",
-}
-# With relaxation: from the reference and about a trial occupation, without and with tables.
-WALLED = ", dimension: 2, width_nm: 1, specularity: 0"
-RELAXING = (
-    ("{kind: bath, path_nm: 1, direction: kept}", 1, "1"),
-    ("{kind: bath, path_nm: 1, direction: kept}", 0, "{energy_meV: [0, 1], value: [1, 2]}"),
-    ("{kind: optical_phonon, path_nm: 1, energy_meV: 1}", 1, "1"),
-    ("{kind: bath, path_nm: 1, direction: kept}", 1, "{energy_meV: [0, 1], value: [1, 2]}"),
-    ("{kind: bath, path_nm: 1, direction: kept}", 1, "1", ", dimension: 3"),
-    ("{kind: bath, path_nm: 1, direction: kept}", 1, "1", WALLED),
-    ("{kind: optical_phonon, path_nm: 1, energy_meV: 1}", 1, "1", ", dimension: 3"),
-    ("{kind: optical_phonon, path_nm: 1, energy_meV: 1}", 1, "1", WALLED),
+CONSTANT = "channel: {{length_nm: 1{}}}\ncontacts: {{bias_mV: 1, temperature_K: 1}}\n"
+TABLES = "{energy_meV: [0, 1], value: [1, 2]}"
+PATH = f"scattering: {{mean_free_path_nm: {TABLES}}}\n"
+SPHERE = ", dimension: 3"
+RIBBON = ", dimension: 2, width_nm: 1, specularity: 0"
+WIRE = ", dimension: 3, width_nm: 1, height_nm: 1, specularity: 0"
+ELASTIC = (
+    CONSTANT.format(""),
+    CONSTANT.format(f", modes: {TABLES}"),
+    CONSTANT.format(SPHERE),
+    CONSTANT.format(SPHERE) + "scattering: {mean_free_path_nm: 1}\n",
+    CONSTANT.format(RIBBON) + "scattering: {mean_free_path_nm: 1}\n",
+    CONSTANT.format(WIRE) + "scattering: {mean_free_path_nm: 1}\n",
+    CONSTANT.format(SPHERE) + PATH,
+)
+BATH = "{kind: bath, path_nm: 1, direction: kept}"
+PHONON = "{kind: optical_phonon, path_nm: 1, energy_meV: 1}"
+# Mechanism, bias, path, and more of the channel: from the reference, and about a trial occupation.
+FROM_REFERENCE = ((BATH, 1, "1", ""), (BATH, 1, "1", SPHERE), (BATH, 1, "1", RIBBON))
+FROM_TRIAL = (
+    (PHONON, 1, "1", ""),
+    (BATH, 1, TABLES, ""),
+    (BATH, 0, TABLES, ""),
+    (PHONON, 1, "1", SPHERE),
+    (PHONON, 1, "1", RIBBON),
 )
 
 
 def main():
     """Compile all variants."""
-    for name, text in VARIANTS.items():
-        compile_for(build(read_text(text, f"variant {name}")))
-    for number, variant in enumerate(RELAXING):
-        problem = build(read_text(_relaxing(*variant), f"relaxing variant {number}"))
-        deviation = deviation_of(problem)
-        rounds.compile_for(rounds.Rounds(problem, 1, StopRequest(), deviation))
+    with ProcessPoolExecutor(2, mp_context=get_context("spawn")) as pool:
+        done = [pool.submit(_without_trial), pool.submit(_with_trial)]
+        for one in done:
+            one.result()
 
 
-def _relaxing(mechanism, bias, path, channel=""):
-    return f"""
+def _without_trial():
+    for variant in FROM_REFERENCE:
+        _relaxing(*variant)
+    for text in ELASTIC:
+        _elastic(text)
+
+
+def _with_trial():
+    for variant in FROM_TRIAL:
+        _relaxing(*variant)
+
+
+def _elastic(text):
+    from carriersim.engine.endless import long_channel
+    from carriersim.engine.problem import build
+    from carriersim.engine.solve import compile_for
+    from carriersim.scenario import read_text
+
+    problem = build(read_text(text + "simulation: {relative_error: 10}\n", "variant"))
+    compile_for(problem)
+    if problem.space is not None:
+        long_channel(problem)
+
+
+def _relaxing(mechanism, bias, path, channel):
+    from carriersim.engine import rounds
+    from carriersim.engine.deviation import deviation_of
+    from carriersim.engine.problem import build
+    from carriersim.engine.solve import StopRequest
+    from carriersim.scenario import read_text
+
+    text = f"""
 channel: {{length_nm: 1{channel}}}
 contacts: {{bias_mV: {bias}, temperature_K: 1}}
 scattering: {{backscatter_path_nm: {path}}}
 relaxation: {{mechanisms: [{mechanism}]}}
 simulation: {{cells: 1, energy_bins: 10, batches: 8}}
 """
+    problem = build(read_text(text, "relaxing variant"))
+    rounds.compile_for(rounds.Rounds(problem, 1, StopRequest(), deviation_of(problem)))
 
 
 if __name__ == "__main__":
