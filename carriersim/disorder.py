@@ -1,6 +1,5 @@
 """Random scatterers: drawn once from their own seed, then as good as given."""
 
-import math
 
 import numpy as np
 
@@ -39,23 +38,6 @@ def draw_random_points(scenario: Scenario) -> Scenario:
     update = {"points": _by_place(points), "random": tuple(groups)}
     drawn = scattering.model_copy(update=update)
     return scenario.model_copy(update={"scattering": drawn})
-
-
-def fresh_points(scenario: Scenario, generator: np.random.Generator) -> tuple[Point, ...]:
-    """Draw the scatterers of all random groups anew, whether drawn before or not; by position.
-
-    For an ensemble of channels: the given points, which have no group, are not among them, but
-    places differ from theirs and from those of probes.
-
-    Raises:
-        ScenarioError: a stretch is too short for its number.
-    """
-    given = [point for point in scenario.scattering.points if point.group is None]
-    taken = _taken(scenario, given)
-    points = []
-    for index in range(len(scenario.scattering.random)):
-        points += _draw(scenario, index, generator, taken, math.inf)
-    return _by_place(points)
 
 
 def _taken(scenario: Scenario, points: list[Point]) -> set[float]:

@@ -28,8 +28,14 @@ def simulate(scenario, workers=None, stop=None, progress=None):
     follow = solve
     if problem.relaxed is not None:
         from carriersim.engine.iterate import relax as follow
-    totals = follow(problem, goal, workers or cores(), stop, progress)
-    return assemble(problem, totals, as_done(drawn, totals.all_histories))
+    workers = workers or cores()
+    totals = follow(problem, goal, workers, stop, progress)
+    endless = None
+    if problem.space is not None:
+        from carriersim.engine.endless import long_channel
+
+        endless = long_channel(problem, stop, workers, totals.flights)
+    return assemble(problem, totals, as_done(drawn, totals.all_histories), endless)
 
 
 def cores():

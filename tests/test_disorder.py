@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 
-from carriersim.disorder import draw_random_points, fresh_points
+from carriersim.disorder import draw_random_points
 from carriersim.keypaths import plain
 from carriersim.memory_check import cuts
 from carriersim.scenario import ScenarioError, read_text, to_yaml
@@ -125,58 +125,6 @@ def test_drawn_numbers_and_transmissions_are_distributed_as_asked():
         assert scaled.max() < 1
         assert abs(scaled.mean() - 1 / 2) < 4 * math.sqrt(1 / 12 / scaled.size)
         assert abs((scaled**2).mean() - 1 / 3) < 4 * math.sqrt(4 / 45 / scaled.size)
-
-
-def test_fresh_points():
-    random = (
-        "{count: 4, transmission: 0.5, angular: tunnel, reflection: diffuse}, "
-        "{density_per_um: 100, transmission: {low: 0.2, high: 0.6}, from_nm: 50, to_nm: 150}"
-    )
-    space = {"channel__dimension": 3, "probes": [{"position_nm": 20.0}]}
-    scenario = drawn(random, **space)
-    text = START % (200, f"points: [{{position_nm: 100, transmission: 0.5}}], random: [{random}]")
-    changes = {"channel.dimension": 3, "probes": space["probes"]}
-    undrawn = read_text(text, changes=changes)
-    points = fresh_points(scenario, np.random.default_rng(3))
-    # The same from the scenario as it was written and as a run saves it, given points apart.
-    assert points == fresh_points(undrawn, np.random.default_rng(3))
-    generator = np.random.default_rng(4)
-    numbers = []
-    for _ in range(400):
-        points = fresh_points(scenario, generator)
-        places = [point.position_nm for point in points]
-        assert places == sorted(set(places))
-        assert not {20.0, 100.0} & set(places)
-        first, second = ([p for p in points if p.group == group] for group in (0, 1))
-        assert len(first) == 4 and len(first) + len(second) == len(points)
-        assert {(p.transmission, p.angular, p.reflection) for p in first} == {
-            (0.5, "tunnel", "diffuse")
-        }
-        assert all(50 < p.position_nm < 150 and 0.2 < p.transmission < 0.6 for p in second)
-        numbers.append(len(second))
-    # A Poisson number of mean 10, see above; each draw is another one.
-    assert abs(np.mean(numbers) - 10) < 4 * math.sqrt(10 / 400)
-    assert abs(np.var(numbers) - 10) < 4 * math.sqrt(210 / 400)
-
-
-def test_fresh_points_avoid_given_places():
-    """A stretch with one free place: drawn anew it is that place again, beside the given one."""
-    values = [50.0]
-    for _ in range(3):
-        values.append(math.nextafter(values[-1], 60.0))
-    low, given, free, high = values
-    text = START % (
-        200,
-        f"points: [{{position_nm: {given!r}, transmission: 0.5}}], random: [{{count: 1, "
-        f"transmission: 1, from_nm: {low!r}, to_nm: {high!r}}}]",
-    )
-    scenario = draw_random_points(read_text(text))
-    for seed in range(5):
-        (point,) = fresh_points(scenario, np.random.default_rng(seed))
-        assert point.position_nm == free
-    crowded = scenario.replace({"probes": [{"position_nm": free}], "scattering.points[1]": None})
-    with pytest.raises(ScenarioError, match=r"random\[0\]: no room for 1 places in 50.0"):
-        fresh_points(crowded, np.random.default_rng(0))
 
 
 def test_no_room_for_the_places():

@@ -56,15 +56,15 @@ def _with_trial():
 
 
 def _elastic(text):
-    from carriersim.engine.endless import long_channel
+    from carriersim.engine import endless
     from carriersim.engine.problem import build
     from carriersim.engine.solve import compile_for
     from carriersim.scenario import read_text
 
-    problem = build(read_text(text + "simulation: {relative_error: 10}\n", "variant"))
+    problem = build(read_text(text, "variant"))
     compile_for(problem)
     if problem.space is not None:
-        long_channel(problem)
+        endless.compile_for(problem)
 
 
 def _relaxing(mechanism, bias, path, channel):
