@@ -20,6 +20,7 @@ NOT_ALONG = (
 )
 NO_ROOT = "with relaxation it needs a run of its own at the bias without current"
 NO_SLOPE = "it needs a run of its own that follows a small change of the bias"
+NO_SLOPE_YET = "in d = 2, 3 not computed yet where relaxation depends on energy"
 NOT_IN_EQUILIBRIUM = (
     "bias 0 while temperatures differ: this run holds the response to a bias, not the state itself"
 )
@@ -124,7 +125,8 @@ def _reasons(problem, observer, totals, numbers):
         if not observer.in_equilibrium():
             why |= dict.fromkeys((*_TEMPERATURES, "departure"), NOT_IN_EQUILIBRIUM)
     if not np.isfinite(numbers.value["conductance"]):
-        why |= dict.fromkeys(("conductance_S", "differential_resistance_ohm"), NO_SLOPE)
+        reason = NO_SLOPE if problem.space is None else NO_SLOPE_YET
+        why |= dict.fromkeys(("conductance_S", "differential_resistance_ohm"), reason)
     elif not np.isfinite(numbers.value["differential"]):
         why.setdefault("differential_resistance_ohm", "no current flows: ask for more histories")
     if totals.residual is None:

@@ -1,6 +1,5 @@
 """Random scatterers: drawn once from their own seed, then as good as given."""
 
-
 import numpy as np
 
 from carriersim.faults import Fault, ScenarioError

@@ -103,6 +103,12 @@ def part(name: str, inside: str) -> str:
     return with_parts(**{name: f"{{{start.get(name, '')}{inside}}}"})
 
 
+def with_directions(mechanisms, **parts):
+    """A relaxing scenario in d = 3."""
+    channel = "{length_nm: 9, dimension: 3}"
+    return with_parts(channel=channel, relaxation=f"{{mechanisms: [{mechanisms}]}}", **parts)
+
+
 def test_defaults():
     scenario = read_text(MINIMAL, "dir/My wire.yaml")
     assert scenario.name == "My wire"
@@ -900,9 +906,51 @@ FAULTS = {
         part("simulation", "fano_error: 0.1"),
         "simulation.fano_error: found 0.1; this version does not compute noise; allowed: no such",
     ),
+    "kept bath in d = 3": (
+        with_directions("{kind: bath, path_nm: 5, direction: kept}"),
+        "relaxation.mechanisms[0].direction: found 'kept' (text); this version relaxes carriers "
+        "that keep their direction in d = 1 only; allowed: direction: randomised, or d = 1",
+    ),
+    "carriers in d = 3": (
+        with_directions("{kind: carriers, path_nm: 5}"),
+        "this version relaxes carriers that keep their direction in d = 1 only; allowed: dir",
+    ),
+    "carriers and phonons in d = 3": (
+        with_directions(
+            "{kind: optical_phonon, path_nm: 5, energy_meV: 9}, "
+            "{kind: carriers, path_nm: 5, direction: randomised}"
+        ),
+        "relaxation.mechanisms[1].kind: found 'carriers' (text); this version has carriers with "
+        "phonons or tables of energy in d = 1 only; allowed: bath, or d = 1",
+    ),
+    "carriers and a table in d = 3": (
+        with_directions(
+            "{kind: carriers, path_nm: 5, direction: randomised}",
+            scattering="{mean_free_path_nm: {energy_meV: [0, 1], value: [1, 2]}}",
+        ),
+        "relaxation.mechanisms[0].kind: found 'carriers' (text); this version has carriers with",
+    ),
+    "driven by temperatures in d = 3": (
+        with_directions(
+            "{kind: optical_phonon, path_nm: 5, energy_meV: 9}",
+            contacts="{bias_mV: 0, temperature_K: 4, left: {temperature_K: 5}}",
+        ),
+        "contacts.bias_mV: found 0; this version has bias 0 between unequal temperatures with "
+        "relaxation in d = 1 only; allowed: a bias that is not 0, or d = 1",
+    ),
 }
 
-LATER = {"noise", "noise in d = 2", "fano error"}
+LATER = {"noise", "noise in d = 2", "fano error", *(name for name in FAULTS if "in d = 3" in name)}
+LATER -= {"width alone in d = 3", "height alone in d = 3"}
+
+
+def test_relaxation_that_every_dimension_has():
+    for mechanisms in (
+        "{kind: bath, path_nm: 5, direction: randomised}",
+        "{kind: optical_phonon, path_nm: 5, energy_meV: 9}",
+        "{kind: carriers, path_nm: 5, direction: randomised}",
+    ):
+        assert read_text(with_directions(mechanisms)).channel.dimension == 3
 
 
 @pytest.mark.parametrize("name", FAULTS)

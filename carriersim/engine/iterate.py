@@ -92,7 +92,9 @@ def relax(problem, goal, workers=1, stop=None, progress=None):
     if goal.max_seconds and not problem.relaxed.setting.exact_energy:
         goal = replace(goal, max_seconds=MAIN_SHARE * goal.max_seconds)
     totals = _follow(problem, deviation, goal, workers, stop, progress)
-    if not problem.relaxed.setting.exact_energy and not stop.flag[0]:
+    # With directions the trial occupation is too rough to linearise about.
+    slope = problem.space is None and not problem.relaxed.setting.exact_energy
+    if slope and not stop.flag[0]:
         tangent = Tangent(problem, _state(problem, deviation, totals.fields))
         windows = max(len(totals.windows) - 1, FEWEST_WINDOWS)
         with contextlib.suppress(NothingDone):

@@ -23,15 +23,15 @@ ELASTIC = (
     CONSTANT.format(SPHERE) + PATH,
 )
 BATH = "{kind: bath, path_nm: 1, direction: kept}"
+RANDOM = "{kind: bath, path_nm: 1, direction: randomised}"
 PHONON = "{kind: optical_phonon, path_nm: 1, energy_meV: 1}"
 # Mechanism, bias, path, and more of the channel: from the reference, and about a trial occupation.
-FROM_REFERENCE = ((BATH, 1, "1", ""), (BATH, 1, "1", SPHERE), (BATH, 1, "1", RIBBON))
+FROM_REFERENCE = ((BATH, 1, "1", ""), (RANDOM, 1, "1", SPHERE), (RANDOM, 1, "1", RIBBON))
 FROM_TRIAL = (
     (PHONON, 1, "1", ""),
     (BATH, 1, TABLES, ""),
     (BATH, 0, TABLES, ""),
     (PHONON, 1, "1", SPHERE),
-    (PHONON, 1, "1", RIBBON),
 )
 
 
