@@ -4,8 +4,9 @@
 
 Each mutation scales one rate, path, transmission or constant inside the engine by 1.02, after the
 scenario has been validated, and runs the tests that ought to notice, in a process of its own (by
-fork, so that the compiled kernels are loaded once): published tests for elastic runs, those of
-test_relaxing_coverage.py for runs with relaxation. A mutation counts as caught only if a number
+fork, so that the compiled kernels are loaded once): published tests for elastic runs, in one
+dimension and with directions, those of test_relaxing_coverage.py for runs with relaxation, and
+those of test_directions.py for random directions. A mutation counts as caught only if a number
 disagrees with its expectation: not if a test breaks or finds its number too noisy. Without a
 mutation the same tests must pass. Exit status 0 if all this is so.
 
@@ -33,12 +34,20 @@ import pytest
 from carriersim import fermi
 from carriersim.engine import (
     deviation,
+    directions,
     mechanisms,
     observe,
     observe_relaxed,
+    observe_space,
+    planes,
     problem,
+    ray_tallies,
+    rays,
     residual,
     rounds,
+    sources,
+    space,
+    straight,
     tallies,
     trial_part,
     wander,
@@ -59,6 +68,7 @@ TWO_STEP = "test_two_step_distribution.py"
 SERIES_LAW = "test_series_law.py"
 THERMO = "test_thermoelectric.py"
 RELAXING = "test_relaxing_coverage.py"
+DIRECTIONS = "test_directions.py"
 
 
 class Applied:
@@ -484,7 +494,10 @@ def opposite_pairs(result):
 
 
 def recompiled(modules, old, new):
-    """Replace a text in the source of the first module; compile all of them again, in order."""
+    """Replace a text in the source of the first module; compile all of them again, in order.
+
+    modules: the changed one and those whose compiled functions call it.
+    """
 
     def install():
         for module in modules:
@@ -492,15 +505,105 @@ def recompiled(modules, old, new):
             if module is modules[0]:
                 assert source.count(old) == 1, f"{source.count(old)} times: {old}"
                 source = source.replace(old, new)
+            before = dict(vars(module))
             exec(compile(source, module.__file__, "exec"), module.__dict__)
+            rebind(before, module)
         Applied.count += 1
 
     return install
 
 
+def rebind(before, module):
+    """Let who has imported a function of a module see the new one."""
+    renewed = {
+        id(function): getattr(module, name)
+        for name, function in before.items()
+        if callable(function) and not isinstance(function, type)
+    }
+    for other in [m for name, m in sys.modules.items() if name.startswith("carriersim")]:
+        for name, thing in list(vars(other).items()):
+            if id(thing) in renewed:
+                setattr(other, name, renewed[id(thing)])
+
+
 def residual_term(old):
     """Scale a term of the residual, given as the beginning of a factor in its source."""
-    return recompiled((residual, wander), old, f"{old}{FACTOR} * ")
+    return recompiled((residual, sources, wander), old, f"{old}{FACTOR} * ")
+
+
+# --- directions -----------------------------------------------------------------------------------
+
+
+def in_space(change):
+    """Pass planes and walls of a problem through change: a dict of new fields, or None."""
+
+    def in_built(built):
+        new = None if built.space is None else change(built.space)
+        if new is None:
+            return None
+        return dataclasses.replace(built, space=dataclasses.replace(built.space, **new))
+
+    return in_problem(in_built)
+
+
+def walls(name):
+    """Scale a number of the walls that scatter."""
+
+    def change(old):
+        if old.walls[0] is None:
+            return None
+        pairs = [p and p._replace(**{name: min(FACTOR * getattr(p, name), 1e9)}) for p in old.walls]
+        return {"walls": tuple(pairs)}
+
+    return in_space(change)
+
+
+def view_edges(old):
+    """The classes of direction a little wider, counted from the axis."""
+    edges = np.cos(np.minimum(FACTOR * np.arccos(old.planes.view_edges), np.pi / 2))
+    first = np.zeros_like(old.planes.view_first)
+    return {"planes": old.planes._replace(view_edges=edges, view_first=first)}
+
+
+def of_dimension(module, name):
+    """Scale a table of numbers, one for each dimension, in d = 2 and 3."""
+
+    def install():
+        table = getattr(module, name)
+        for dimension in (2, 3):
+            table[dimension] *= FACTOR
+        Applied.count += 1
+
+    return install
+
+
+def own_table(module, name):
+    """The same, as one module alone sees it."""
+
+    def install():
+        setattr(module, name, dict(getattr(module, name)))
+        of_dimension(module, name)()
+
+    return install
+
+
+def of_sample(chosen):
+    """Scale something of what a batch found; chosen: function of the Sample's dict of sums."""
+
+    def change(sample):
+        chosen(sample.rays)[...] *= FACTOR
+
+    return returned(ray_tallies, "reduce", change)
+
+
+def kernel(old, new):
+    """Change the source of the kernel with directions."""
+    return recompiled((rays,), old, new)
+
+
+def drawn(old, new):
+    """Change the source of the random directions that the kernel draws."""
+    return recompiled((directions, rays), old, new)
 
 
 def one_run(*names):
@@ -658,16 +761,16 @@ RELAXATION = (
     *(
         Mutation(f"strength of {what}", source(kind), tests)
         for what, kind, tests in (
-            ("the left number", wander.LEFT_NUMBER, RANDOM_BATH),
-            ("the left heat", wander.LEFT_HEAT, COLD_BATH),
-            ("the right heat", wander.RIGHT_HEAT, COLD_BATH),
-            ("a probe's heat", wander.PROBE_HEAT, HOT_PROBE),
-            ("the carriers' heat", wander.CARRIER_HEAT, RANDOM_CARRIERS),
+            ("the left number", sources.LEFT_NUMBER, RANDOM_BATH),
+            ("the left heat", sources.LEFT_HEAT, COLD_BATH),
+            ("the right heat", sources.RIGHT_HEAT, COLD_BATH),
+            ("a probe's heat", sources.PROBE_HEAT, HOT_PROBE),
+            ("the carriers' heat", sources.CARRIER_HEAT, RANDOM_CARRIERS),
         )
     ),
     Mutation(
         "energies of heat pairs",
-        recompiled((wander,), "return between * z", f"return {FACTOR} * between * z"),
+        recompiled((sources, wander), "return between * z", f"return {FACTOR} * between * z"),
         COLD_BATH,
     ),
     Mutation("temperatures of the fields", result_of(deviation, "temperatures"), RANDOM_CARRIERS),
@@ -752,6 +855,184 @@ RELAXATION = (
 MUTATIONS += RELAXATION
 
 
+SLAB, ACROSS, WIRE = "test_slab.py", "test_planes_across.py", "test_wire_and_ribbon.py"
+SLABS = tuple(f"{SLAB}::test_thicker_slabs[{d}-10]" for d in (2, 3))
+PROFILE = (f"{SLAB}::test_half_space_means_along_a_slab[3]",)
+THICK_CONTACTS = (f"{SLAB}::test_contacts_of_a_thick_slab[2]",)
+SINGLE = f"{ACROSS}::test_one_plane_in_a_channel_that_scatters"
+TUNNEL = (f"{SINGLE}[3 tunnel]",)
+BARRIERS = (f"{ACROSS}::test_barriers_at_contacts[2-diffuse]",)
+STRAIGHT = (f"{ACROSS}::test_mirror_planes_add_up_direction_by_direction[True-2]",)
+ANGLES = (f"{ACROSS}::test_current_by_direction[3]",)
+ROUGH = (f"{WIRE}::test_two_walls_that_scatter[0.5-2]",)
+FILM = (f"{WIRE}::test_which_pair_of_walls_scatters_is_the_same[0.9999]",)
+MOMENTUM = (f"{WIRE}::test_walls_and_collisions_share_a_piece_by_the_momentum_they_take[3]",)
+MEAN_PATH = (f"{WIRE}::test_mean_path_does_not_depend_on_what_happens_in_a_channel[3]",)
+EMISSION = tuple(f"{DIRECTIONS}::test_emission_at_the_left_contact[{d}]" for d in (2, 3))
+FREE = tuple(f"{DIRECTIONS}::test_isotropic_moments[{d}-True]" for d in (2, 3))
+BY_COSINE = tuple(f"{DIRECTIONS}::test_cosine_law_moments[{d}-True]" for d in (2, 3))
+
+SPACE = (
+    # What carriers meet.
+    Mutation("rate where carriers have directions", thickness(outside_sections), SLABS[:1], True),
+    Mutation("transmission of a plane", transmission(scatterer(0)), TUNNEL),
+    Mutation("transmission of a contact's plane", transmission(left_node), BARRIERS),
+    Mutation("specularity of walls", walls("specularity"), ROUGH, True),
+    Mutation("distance of walls", walls("size"), ROUGH),
+    Mutation(
+        "backscattering path in d = 2 and 3",
+        own_table(problem, "BACKSCATTER"),
+        (f"{SLAB}::test_backscattering_path_is_this_many_mean_free_paths[3]",),
+    ),
+    Mutation(
+        "angle of a tunnel barrier",
+        recompiled(
+            (planes, rays),
+            "return square / (square + (1.0 - chance))",
+            f"return square / (square + {FACTOR} * (1.0 - chance))",
+        ),
+        TUNNEL,
+    ),
+    Mutation(
+        "free path", kernel("free = free_of[segment]", f"free = {FACTOR} * free_of[segment]"), SLABS
+    ),
+    Mutation(
+        "mirrors above and below",
+        kernel("mirror = second.specularity", f"mirror = {FACTOR} * second.specularity"),
+        FILM,
+    ),
+    # Random directions.
+    Mutation(
+        "emission in d = 3", kernel("return np.sqrt(quantile)", "return quantile**0.51"), EMISSION
+    ),
+    Mutation(
+        "emission in d = 2",
+        kernel("return np.sqrt(1.0 - sine * sine)", "return (1.0 - sine * sine) ** 0.51"),
+        EMISSION,
+    ),
+    Mutation(
+        "isotropic directions in d = 3",
+        drawn(
+            "out[0, k] = (2.0 * one_to_two(next_bits(lanes, k)) - 3.0) + 2.0**-52",
+            "out[0, k] = 2.0 * (one_to_two(next_bits(lanes, k)) - 1.0) ** 1.02 - 1.0",
+        ),
+        FREE,
+    ),
+    Mutation(
+        "isotropic directions in d = 2",
+        drawn("b = _QUARTER_PI * (", f"b = {FACTOR} * _QUARTER_PI * ("),
+        FREE,
+    ),
+    Mutation(
+        "cosine law in d = 3",
+        drawn("out[0, k] = np.sqrt(square)", "out[0, k] = square**0.51"),
+        BY_COSINE,
+    ),
+    Mutation(
+        "cosine law in d = 2",
+        drawn(
+            "out[0, k] = max(np.sqrt(1.0 - sine * sine), SMALLEST)",
+            "out[0, k] = max((1.0 - sine * sine) ** 0.51, SMALLEST)",
+        ),
+        BY_COSINE,
+    ),
+    # Counts of the kernel.
+    Mutation(
+        "weight of a flight",
+        kernel("new_weight = 1.0 / abs(new_ux)", f"new_weight = {FACTOR} / abs(new_ux)"),
+        PROFILE,
+    ),
+    Mutation(
+        "momentum that walls take",
+        kernel("lost[b, segment] += ux", f"lost[b, segment] += {FACTOR} * ux"),
+        MOMENTUM,
+    ),
+    Mutation(
+        "weight of a crossing",
+        recompiled(
+            (planes, rays),
+            "return weight if weight * GRAZING",
+            f"return {FACTOR} * weight if weight * GRAZING",
+        ),
+        THICK_CONTACTS,
+    ),
+    Mutation(
+        "what barriers let through of what is emitted",
+        result_of(ray_tallies, "mean_passing"),
+        BARRIERS,
+    ),
+    Mutation("weight of the current by direction", result_of(ray_tallies, "drive_of"), ANGLES),
+    Mutation("path per length", of_dimension(space, "OBLIQUE"), MEAN_PATH, True),
+    Mutation(
+        "crossings to the right behind planes",
+        of_sample(lambda sums: sums["densities"][:, 3]),
+        (f"{ACROSS}::test_half_space_means_at_both_sides_of_every_plane[3]",),
+    ),
+    Mutation(
+        "mean of right-movers",
+        recompiled(
+            (ray_tallies,),
+            "g_right = weight[b] * (right",
+            f"g_right = {FACTOR} * weight[b] * (right",
+        ),
+        PROFILE,
+    ),
+    Mutation(
+        "mean of left-movers",
+        recompiled(
+            (ray_tallies,), "g_left = weight[b] * (left", f"g_left = {FACTOR} * weight[b] * (left"
+        ),
+        PROFILE,
+    ),
+    # Directions that nothing mixes.
+    Mutation(
+        "resistance of a plane at an angle",
+        recompiled(
+            (straight,),
+            "resistance[k] = (1.0 - chance)",
+            f"resistance[k] = {FACTOR} * (1.0 - chance)",
+        ),
+        STRAIGHT,
+    ),
+    Mutation(
+        "occupation at an angle",
+        recompiled(
+            (straight,),
+            "crossings[b, k, LEFT_BEHIND] += weight",
+            f"crossings[b, k, LEFT_BEHIND] += {FACTOR} * weight",
+        ),
+        STRAIGHT,
+    ),
+    # From counts to results.
+    Mutation(
+        "potential before a node",
+        returned(observe_space, "beside_nodes", member(0)),
+        THICK_CONTACTS,
+    ),
+    Mutation("potential behind a node", returned(observe_space, "beside_nodes", member(1)), TUNNEL),
+    Mutation("current by direction", result_of(observe_space, "by_direction"), ANGLES),
+    Mutation("classes of direction", in_space(view_edges), ANGLES),
+    Mutation("share of collisions", own_table(observe_space, "BACKSCATTER"), MOMENTUM),
+    Mutation(
+        "readings where carriers have directions",
+        in_problem(probe_weight),
+        (f"{ACROSS}::test_probes_read_what_arrives[2]",),
+    ),
+)
+MUTATIONS += SPACE
+
+
+# Every variant of the kernel with directions.
+LOADING_SPACE = [
+    f"{{channel: {{length_nm: 1, dimension: {channel}}}, scattering: {{{scattering}}}, contacts:"
+    f" {{bias_mV: 1, temperature_K: 1}}, simulation: {{cells: 2, batches: 8, histories: 8}}}}"
+    for channel, scattering in (
+        ("3", ""),
+        ("3", "mean_free_path_nm: 1"),
+        ("2, width_nm: 1, specularity: 0", ""),
+        ("3, width_nm: 1, height_nm: 1, specularity: 0", ""),
+    )
+]
 # Every variant of the relaxing kernels.
 LOADING = [
     "{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}, scattering: {"
@@ -794,9 +1075,9 @@ class Recorder:
 
 
 def place(test):
-    """Path of a test: one with relaxation, else a published one."""
+    """Path of a test: a published one, but for those with relaxation and of directions."""
     folder = ROOT / "tests"
-    return folder / test if test.startswith(RELAXING) else folder / "published" / test
+    return folder / test if test.startswith((RELAXING, DIRECTIONS)) else folder / "published" / test
 
 
 def run_tests(install, tests):
@@ -888,10 +1169,13 @@ def main():
     begin = time.perf_counter()
     # Load the compiled kernels before the children are forked.
     simulate("{channel: {length_nm: 1}, contacts: {bias_mV: 1, temperature_K: 1}}")
-    for text in (
-        LOADING if any(test.startswith(RELAXING) for m in chosen for test in m.tests) else ()
-    ):
-        simulate(text)
+    tests = {test for m in chosen for test in m.tests}
+    if any(test.startswith(RELAXING) for test in tests):
+        for text in LOADING:
+            simulate(text)
+    if any(test.startswith((SLAB, ACROSS, WIRE)) for test in tests):
+        for text in LOADING_SPACE:
+            simulate(text)
     failed = check(chosen)
     print(f"{len(chosen)} mutations, {len(failed)} failed, {time.perf_counter() - begin:.0f} s")
     return 1 if failed else 0
