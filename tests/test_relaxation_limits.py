@@ -595,7 +595,7 @@ def test_other_dimensions_have_the_ballistic_resistance_only():
     case = read_text(f"""
 channel: {{length_nm: 100, dimension: 3}}
 contacts: {{bias_mV: 10, temperature_K: 10}}
-relaxation: {{mechanisms: [{KEPT}]}}
+relaxation: {{mechanisms: [{{kind: bath, path_nm: 60, {RANDOM}]}}
 """)
     assert [limit.name for limit in limits.limits_for(case)] == ["ballistic resistance"]
 

@@ -12,6 +12,7 @@ from carriersim import scenario as scenarios
 from carriersim.engine import ray_tallies, rays, trajectories
 from carriersim.engine.directions import new_ray_stream
 from carriersim.engine.problem import build
+from carriersim.engine.streams import TRAJECTORIES
 from carriersim.engine.trajectories import sample_trajectories
 from carriersim.figures import directions, draw_directions, draw_trajectories, files, save_all
 from carriersim.figures import trajectories as drawn
@@ -175,7 +176,7 @@ def test_sample_carriers_are_those_of_the_kernel(monkeypatch):
     space = problem.space
     for number in range(1, 41):
         counts = ray_tallies.empty_counts(problem)
-        stream = new_ray_stream(1, number, trajectories.PURPOSE)
+        stream = new_ray_stream(1, number, TRAJECTORIES)
         rays.cross(
             number, 1, trajectories._offset(1), problem.geometry, space.planes, *space.faces, None,
             ray_tallies.drive_of(problem), stream, counts, np.zeros(1, np.uint8), 10**9, None,
@@ -236,7 +237,7 @@ def test_as_many_trajectories_as_asked(count):
 
 def test_no_trajectories_without_directions_or_with_relaxation():
     assert sample_trajectories(problem_of(RELAXING, {"relaxation.mechanisms": None}), 6) == ()
-    bath = [{"kind": "bath", "path_nm": 50, "direction": "kept"}]
+    bath = [{"kind": "bath", "path_nm": 50, "direction": "randomised"}]
     assert sample_trajectories(problem_of(RIBBON, {"relaxation.mechanisms": bath}), 6) == ()
 
 

@@ -773,7 +773,7 @@ TUNNEL_TABLE = f"{{points: [{{position_nm: 50, transmission: {TABLE}, angular: t
         ("{mean_free_path_nm: 50}", "probes: [{position_nm: 50, coupling: 0.5}]\n"),
         (
             "{mean_free_path_nm: 50}",
-            "relaxation: {mechanisms: [{kind: bath, path_nm: 9, direction: kept}]}\n",
+            "relaxation: {mechanisms: [{kind: bath, path_nm: 9, direction: randomised}]}\n",
         ),
     ],
 )

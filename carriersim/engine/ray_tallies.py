@@ -86,7 +86,7 @@ def _state_emission(problem, densities, fresh, histories):
         chance = spectrum.values[:, spectrum.node_table[0], 0]
     passing = mean_passing(chance, space.planes.tunnel[0], space.dimension)
     behind, back = histories * passing - fresh[:, 0], histories * (1.0 - passing) - fresh[:, 1]
-    densities[:, RIGHT_BEFORE - RIGHT_BEFORE] += behind + back
+    densities[:, RIGHT_BEFORE - RIGHT_BEFORE] = histories
     densities[:, LEFT_BEFORE - RIGHT_BEFORE] += back
     densities[:, RIGHT_BEHIND - RIGHT_BEFORE] += behind
 

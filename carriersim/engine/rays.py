@@ -74,7 +74,7 @@ def cross(
     first_cell, cells, length_nm = geometry.first_cell, geometry.cells, geometry.length_nm
     per_nm_of = cells / length_nm
     rate_of = geometry.thickness / length_nm
-    free_of = np.where(rate_of > 0.0, 1.0 / rate_of, FAR)
+    free_of = 1.0 / np.maximum(rate_of, 1.0 / FAR)
     tunnel, diffuse = planes.tunnel, planes.diffuse
     view, view_edges, view_first = planes.looked_at, planes.view_edges, planes.view_first
     last = geometry.transmission.size - 1
@@ -97,7 +97,7 @@ def cross(
                 fill_uniforms(lanes, uniforms)
                 q = 0
             # The same turn about the axis as the direction in the block.
-            wider = np.sqrt((1.0 - ux * ux) / (1.0 - lambert[0, j] * lambert[0, j]))
+            wider = np.sqrt(1.0 - ux * ux) / np.hypot(lambert[1, j], lambert[2, j])
             uy, uz = wider * lambert[1, j], wider * lambert[2, j]
             y = walls.size * uniforms[q]
             q += 1

@@ -71,7 +71,7 @@ def solve_straight(
         through = 1.0 / total
         right = 1.0  # right-movers before a node; left-movers: less `through`
         for k in range(nodes):
-            behind = right - through * resistance[k]
+            behind = max(right - through * resistance[k], through)
             crossings[b, k, FROM_LEFT] += right
             crossings[b, k, FROM_RIGHT] += behind - through
             crossings[b, k, RIGHT_BEFORE] += weight * right
