@@ -379,7 +379,11 @@ def without_slopes(monkeypatch):
     monkeypatch.setattr(iterate, "_follow", main_run_only)
 
 
-OVER_SEEDS = ["kept bath", "phonon", "coupled probe"]
+OVER_SEEDS = [
+    pytest.param("kept bath", marks=pytest.mark.slow),
+    "phonon",
+    pytest.param("coupled probe", marks=pytest.mark.slow),
+]
 # Their errors cover a bend of f inside a bin, which the means compared here don't have, and in runs
 # from a trial occupation also what one particle of the whole bias would change.
 AT_LEAST = {"f_plus", "f_minus", "f_minus_low"}

@@ -76,7 +76,7 @@ BARRIERS = (
 )
 
 
-@pytest.mark.parametrize("direction", ["kept", "randomised"])
+@pytest.mark.parametrize("direction", ["kept", pytest.param("randomised", marks=pytest.mark.slow)])
 def test_bath_between_two_energy_filters(direction):
     """Relaxation between barriers that pass different energies changes the current."""
     text = channel(f"{{kind: bath, path_nm: 100, direction: {direction}}}", points=TWO_BARRIERS)

@@ -220,6 +220,7 @@ RUNS = {
 # --- against the deterministic solution -----------------------------------------------------------
 
 
+@pytest.mark.slow
 def test_kept_bath_between_filters_in_numbers(run_of):
     run = run_of("kept")
     result, expected = run.result, run.expected
@@ -287,7 +288,9 @@ def profile_place(result, place_nm):
     return result.x_nm[np.searchsorted(result.cell_edges_nm, place_nm, side="right") - 1]
 
 
-@pytest.mark.parametrize("name", ["kept", "randomised", "hot"])
+@pytest.mark.parametrize(
+    "name", ["kept", pytest.param("randomised", marks=pytest.mark.slow), "hot"]
+)
 def test_occupations(run_of, name):
     """f± at all energies around the contacts' potentials, and the distance from equilibrium."""
     run = run_of(name)
@@ -441,6 +444,7 @@ def test_contacts_of_different_temperature(run_of):
         assert getattr(result, name) is None and "temperatures" in result.why[name]
 
 
+@pytest.mark.slow
 def test_optical_phonons_and_the_elastic_path():
     """In one dimension the net flux is the same everywhere: the path's part is R_B L/lam."""
     text = """

@@ -252,6 +252,7 @@ def test_coupled_probe_of_unequal_weights():
 TABLE = ((0, 30), (0.2, 0.8))
 
 
+@pytest.mark.slow
 def test_randomised_bath_and_a_table():
     case = replace(COLD, planes=(Plane(40, TABLE),), mechanisms=(Bath(80, True),))
     run, exact = follow(case, 800_000), solve(case)
@@ -303,6 +304,7 @@ def test_no_slope_yet():
     assert "d = 2, 3" in result.why["differential_resistance_ohm"]
 
 
+@pytest.mark.slow
 def test_linear_response():
     """Bias 0, with a phonon: as much as a thousandth of kT gives."""
     case = Case(100, 0.01, 3, 100, mean_free_path=100, mechanisms=(Phonon(50, 30),))
@@ -364,6 +366,7 @@ ROUGH = ", width_nm: 60, height_nm: 80, specularity: 0.3"
 MIRRORS = ", width_nm: 60, height_nm: 80, specularity: 1"
 
 
+@pytest.mark.slow
 def test_randomised_bath_between_rough_walls():
     """Its R is that of elastic collisions as frequent as both, between the same walls."""
     case = replace(COLD, planes=HALF, mechanisms=(Bath(100, True),))

@@ -26,7 +26,7 @@ BATH = "{kind: bath, path_nm: 1, direction: kept}"
 RANDOM = "{kind: bath, path_nm: 1, direction: randomised}"
 PHONON = "{kind: optical_phonon, path_nm: 1, energy_meV: 1}"
 # Mechanism, bias, path, and more of the channel: from the reference, and about a trial occupation.
-FROM_REFERENCE = ((BATH, 1, "1", ""), (RANDOM, 1, "1", SPHERE), (RANDOM, 1, "1", RIBBON))
+FROM_REFERENCE = ((BATH, 1, "1", ""), (RANDOM, 1, "1", SPHERE))
 FROM_TRIAL = (
     (PHONON, 1, "1", ""),
     (BATH, 1, TABLES, ""),
