@@ -788,7 +788,7 @@ RELAXATION = (
             "field",
         )
     ),
-    Mutation("trial's heat of a bath", result_of(trial_part, "_bath_heat"), KEPT_BATH, True),
+    Mutation("trial's heat of a bath", result_of(trial_part, "_bath_heat"), KEPT_BATH),
     Mutation("trial's energies", returned(trial_part, "number_and_energy", member(1)), KEPT_BATH),
     # What it lacks.
     *(
@@ -877,7 +877,7 @@ SPACE = (
     Mutation("rate where carriers have directions", thickness(outside_sections), SLABS[:1], True),
     Mutation("transmission of a plane", transmission(scatterer(0)), TUNNEL),
     Mutation("transmission of a contact's plane", transmission(left_node), BARRIERS),
-    Mutation("specularity of walls", walls("specularity"), ROUGH, True),
+    Mutation("specularity of walls", walls("specularity"), ROUGH),
     Mutation("distance of walls", walls("size"), ROUGH),
     Mutation(
         "backscattering path in d = 2 and 3",
@@ -962,7 +962,7 @@ SPACE = (
         BARRIERS,
     ),
     Mutation("weight of the current by direction", result_of(ray_tallies, "drive_of"), ANGLES),
-    Mutation("path per length", of_dimension(space, "OBLIQUE"), MEAN_PATH, True),
+    Mutation("path per length", of_dimension(space, "OBLIQUE"), MEAN_PATH),
     Mutation(
         "crossings to the right behind planes",
         of_sample(lambda sums: sums["densities"][:, 3]),
