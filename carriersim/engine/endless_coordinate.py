@@ -9,6 +9,7 @@ hold up come back again and again, and at random places that fades like a power 
 
 import numpy as np
 
+from carriersim.engine.planes import mean_passing_flux
 from carriersim.engine.space import OBLIQUE
 
 SAMPLES = 1 << 13  # of places, directions and path lengths between walls
@@ -84,19 +85,10 @@ class Coordinate:
         passing, weak = transmission, 1.0 - transmission
         if tunnel:
             gamma = (1.0 - transmission) / transmission
-            passing = _flux_passing(gamma, self.dimension)
+            passing = mean_passing_flux(transmission, True, self.dimension)
             # <|u_x|^3 (1 - T(u_x))> / <|u_x|^3> is gamma <|u_x| T(u_x)> / <|u_x|^3>.
             weak = gamma * passing / (OBLIQUE[self.dimension] * _CUBE[self.dimension])
         return factor * weak + (1.0 - passing) ** 2 / passing
-
-
-def _flux_passing(gamma, dimension):
-    """Transmission of a tunnel barrier averaged over the flux of a half space."""
-    gamma = np.maximum(gamma, 1e-300)
-    if dimension == 2:
-        root = np.sqrt(1.0 + gamma)
-        return 1.0 - gamma * np.log((root + 1.0) / np.sqrt(gamma)) / root
-    return 1.0 - gamma * np.log1p(1.0 / gamma)
 
 
 def _even(count, dimensions):

@@ -141,25 +141,27 @@ class Observer:
     def _parts(self, totals, t, resistance):
         """Probe readings (fraction of the bias) and the parts of the resistance."""
         arrivals = totals["arrivals"] / totals["histories"] / self.full
-        through = self.problem.functionals.filling @ t / self.full
-        from_left, from_right = arrivals[:, 0], arrivals[:, 1]
         probes = self.problem.probe_node
         weight = np.array([p.weight_right for p in self.problem.scenario.probes])
-        reading = weight * from_left[probes] + (1.0 - weight) * from_right[probes]
-        before = from_left - 0.5 * through  # mean of both directions just left of each node
-        after = from_right + 0.5 * through
-        parts = parts_of(
-            before, after, self.cuts(), self.jumps, self._mechanism_shares(t), resistance
-        )
+        reading = weight * arrivals[probes, 0] + (1.0 - weight) * arrivals[probes, 1]
+        before, after = self.beside_nodes(totals, t)
+        shares = self._mechanism_shares(totals, t)
+        parts = parts_of(before, after, self.cuts(), self.jumps, shares, resistance)
         return parts | {
             "probe": reading,
             "four_point": pair_differences(reading) * resistance,
         }
 
+    def beside_nodes(self, totals, t):
+        """Mean potential of both directions left and right of each node, over the bias."""
+        arrivals = totals["arrivals"] / totals["histories"] / self.full
+        through = self.problem.functionals.filling @ t / self.full
+        return arrivals[:, 0] - 0.5 * through, arrivals[:, 1] + 0.5 * through
+
     def piece_scatters(self):
         """For each piece and mechanism of the breakdown, whether anything scatters there."""
-        paths = [self.problem.segment_paths[node] for node in self.cuts()[:-1]]
-        return np.array([bool(here) for here in paths for _ in here or [None]])
+        turning = [self.turning(node) for node in self.cuts()[:-1]]
+        return np.array([bool(names) for names in turning for _ in names or [None]])
 
     def cuts(self):
         """Nodes where the breakdown is cut: contacts, point scatterers, section edges."""
@@ -169,7 +171,7 @@ class Observer:
         """Names of what turns carriers round in the piece that begins at a node."""
         return [path.name for path in self.problem.segment_paths[node]]
 
-    def _mechanism_shares(self, t):
+    def _mechanism_shares(self, totals, t):
         """For each piece the share of the backscattered flux that each of its paths destroys."""
         centres = self.problem.bins.centres if self.problem.bins else np.zeros(1)
         flux = np.abs(self.drive * t)

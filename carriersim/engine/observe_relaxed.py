@@ -150,15 +150,19 @@ class RelaxedObserver:
 
     def parts(self, t, resistance):
         """Parts of the resistance."""
-        arrivals, departures = (t[key] / t["histories"] for key in ("arrivals", "departures"))
-        before = 0.5 * (arrivals[:, 0] + departures[:, 1]) / self.full
-        after = 0.5 * (arrivals[:, 1] + departures[:, 0]) / self.full
+        before, after = self.beside_nodes(t)
         # At a contact that lets everybody pass nothing falls; a trial occupation knows it roughly.
         if not self.jumps[0]:
             after[0] = before[0]
         if not self.jumps[-1]:
             before[-1] = after[-1]
         return parts_of(before, after, self.cuts(), self.jumps, self._shares(t), resistance)
+
+    def beside_nodes(self, t):
+        """Mean potential of both directions left and right of each node, over the bias."""
+        arrivals, departures = (t[key] / t["histories"] for key in ("arrivals", "departures"))
+        before = 0.5 * (arrivals[:, 0] + departures[:, 1]) / self.full
+        return before, 0.5 * (arrivals[:, 1] + departures[:, 0]) / self.full
 
     def _shares(self, t):
         """Share of each mechanism in the directed flux that is destroyed, for each piece."""

@@ -10,7 +10,7 @@ import numpy as np
 
 from carriersim.constants import AMPERE_PER_MEV
 from carriersim.engine.mechanisms import RANDOM_BATH, RANDOM_CARRIERS
-from carriersim.engine.observe import Observer, pair_differences, parts_of
+from carriersim.engine.observe import Observer
 from carriersim.engine.observe_relaxed import RelaxedObserver
 from carriersim.engine.space import BACKSCATTER
 
@@ -21,30 +21,17 @@ class SpaceObserver(Observer):
     """An Observer where carriers have directions."""
 
     def _parts(self, totals, t, resistance):
-        arrivals = totals["arrivals"] / totals["histories"] / self.full
-        probes = self.problem.probe_node
-        weight = np.array([p.weight_right for p in self.problem.scenario.probes])
-        reading = weight * arrivals[probes, 0] + (1.0 - weight) * arrivals[probes, 1]
-        before, after = beside_nodes(totals, self.full)
-        shares = self._shares(totals, t)
-        parts = parts_of(before, after, self.cuts(), self.jumps, shares, resistance)
-        return parts | {
-            "probe": reading,
-            "four_point": pair_differences(reading) * resistance,
-            "by_direction": self._by_direction(totals),
-        }
+        parts = super()._parts(totals, t, resistance)
+        return parts | {"by_direction": self._by_direction(totals)}
 
-    def piece_scatters(self):
-        """For each piece and mechanism of the breakdown, whether anything scatters there."""
-        turning = [self.turning(node) for node in self.cuts()[:-1]]
-        return np.array([bool(names) for names in turning for _ in names or [None]])
+    def beside_nodes(self, totals, t):
+        return beside_nodes(totals, self.full)
 
     def turning(self, node):
         """Names of what turns carriers round in the piece that begins at a node."""
-        names = [path.name for path in self.problem.segment_paths[node]]
-        return names + [WALLS] * (self.problem.space.scatters)
+        return super().turning(node) + [WALLS] * self.problem.space.scatters
 
-    def _shares(self, totals, t):
+    def _mechanism_shares(self, totals, t):
         """For each piece the share of each mechanism in the directed motion that is destroyed.
 
         Collisions take u_x at the rate of the current over the mean free path; what walls take is
@@ -64,9 +51,7 @@ class SpaceObserver(Observer):
             amounts = [factor * length * (flux @ p.rate_per_nm(centres)) for p in paths]
             if problem.space.scatters:
                 amounts.append(lost[start:stop].sum())
-            amounts = np.array(amounts or [1.0])
-            total = amounts.sum()
-            shares.append(amounts / total if total else np.full(amounts.size, 1 / amounts.size))
+            shares.append(in_proportion(amounts))
         return shares
 
     def _by_direction(self, totals):
@@ -82,22 +67,15 @@ class RelaxedSpaceObserver(RelaxedObserver):
 
     def turning(self, node):
         """Names of what turns carriers round in the piece that begins at a node."""
-        return super().turning(node) + [WALLS] * (self.problem.space.scatters)
+        return super().turning(node) + [WALLS] * self.problem.space.scatters
 
     def scalars(self, t):
         """Numbers, probes, breakdown and the current by direction."""
         unit = self.ampere_per_meV * (1e3 if self.window.linear else 1.0)
         return super().scalars(t) | {"by_direction": unit * by_direction(self.problem, t)}
 
-    def parts(self, t, resistance):
-        """Parts of the resistance."""
-        before, after = beside_nodes(t, self.full)
-        # At a contact that lets everybody pass nothing falls; a trial occupation knows it roughly.
-        if not self.jumps[0]:
-            after[0] = before[0]
-        if not self.jumps[-1]:
-            before[-1] = after[-1]
-        return parts_of(before, after, self.cuts(), self.jumps, self._shares(t), resistance)
+    def beside_nodes(self, t):
+        return beside_nodes(t, self.full)
 
     def _shares(self, t):
         """Share of each mechanism in the directed motion that is destroyed, for each piece."""
@@ -115,10 +93,15 @@ class RelaxedSpaceObserver(RelaxedObserver):
                 amounts.append(t["turned"][cells].sum())
             if problem.space.scatters:
                 amounts.append(t["lost"][start:stop].sum())
-            amounts = np.array(amounts or [1.0])
-            total = amounts.sum()
-            shares.append(amounts / total if total else np.full(amounts.size, 1 / amounts.size))
+            shares.append(in_proportion(amounts))
         return shares
+
+
+def in_proportion(amounts):
+    """Shares of amounts, equal ones if there is nothing to share; of nothing at all, one whole."""
+    amounts = np.array(amounts or [1.0])
+    total = amounts.sum()
+    return amounts / total if total else np.full(amounts.size, 1.0 / amounts.size)
 
 
 def beside_nodes(totals, full):

@@ -9,7 +9,6 @@ from numba import njit
 
 from carriersim.engine import sources as w
 from carriersim.engine import streams
-from carriersim.engine.directions import new_ray_stream
 from carriersim.engine.flights import DONE, TOO_MANY_EVENTS
 from carriersim.engine.pairs import no_pairs, phonon_pairs
 from carriersim.engine.planes import Walls
@@ -17,9 +16,9 @@ from carriersim.engine.residual import cumulative
 from carriersim.engine.solve import (
     EVENT_LIMIT,
     chunks,
-    new_stream,
     offset_of,
     several,
+    stream_of,
     too_many,
 )
 from carriersim.engine.wander import wander
@@ -149,8 +148,8 @@ class Rounds:
         simulation = problem.scenario.simulation
         self.batches = simulation.batches
         purpose = streams.TANGENT if deviation.tangent else streams.TRANSPORT
-        new = new_stream if problem.space is None else new_ray_stream
-        self.streams = [new(simulation.seed, b, purpose) for b in range(self.batches)]
+        seed = simulation.seed
+        self.streams = [stream_of(problem, seed, b, purpose) for b in range(self.batches)]
         self.offsets = [offset_of(simulation.seed, b) for b in range(self.batches)]
         self.done = np.zeros(self.batches, np.int64)
         self.setting = self.relaxed.setting

@@ -90,8 +90,7 @@ def solve(problem, goal, workers=1, stop=None, progress=None):
     """
     stop = stop or StopRequest()
     simulation = problem.scenario.simulation
-    new = new_stream if problem.space is None else new_ray_stream
-    batches = [new(simulation.seed, b) for b in range(simulation.batches)]
+    batches = [stream_of(problem, simulation.seed, b) for b in range(simulation.batches)]
     offsets = [offset_of(simulation.seed, b) for b in range(simulation.batches)]
     totals = _empty_totals(problem, simulation.batches)
     run = _batch_runner(problem, batches, offsets, stop)
@@ -135,6 +134,12 @@ def relative_error(problem, totals):
     if mean == 0.0:
         return np.inf
     return float(each.std(ddof=1) / np.sqrt(each.size) / abs(mean))
+
+
+def stream_of(problem, seed, batch, purpose=streams.TRANSPORT):
+    """Random numbers of one batch of a problem, with directions where it has any."""
+    new = new_stream if problem.space is None else new_ray_stream
+    return new(seed, batch, purpose)
 
 
 def new_stream(seed, batch, purpose=streams.TRANSPORT):
@@ -185,39 +190,37 @@ def _batch_runner(problem, batches, offsets, stop):
 
 def kernel_of(problem):
     """A function (first, histories, offset, stream, stop flag) -> outcome, counts, Sample."""
-    common = problem.geometry, problem.spectrum
+    space, geometry, spectrum = problem.space, problem.geometry, problem.spectrum
+    module = tallies if space is None else ray_tallies
+    drive = None if space is None else ray_tallies.drive_of(problem)
 
-    def one_dimension(first, histories, offset, stream, flag):
-        counts = tallies.empty_counts(problem)
-        setting = first, histories, offset, *common, stream
-        status = flights.fly(*setting, counts, flag, EVENT_LIMIT)
-        done = status == flights.DONE
-        return status, counts, tallies.reduce(problem, counts, histories) if done else None
+    def one_dimension(first, histories, offset, stream, counts, flag):
+        return flights.fly(
+            first, histories, offset, geometry, spectrum, stream, counts, flag, EVENT_LIMIT
+        )
 
-    def directions(first, histories, offset, stream, flag):
-        counts = ray_tallies.empty_counts(problem)
-        status = rays.cross(
-            first, histories, offset, problem.geometry, space.planes, *space.walls,
-            problem.spectrum, drive, stream, counts, flag, EVENT_LIMIT, None,
+    def directions(first, histories, offset, stream, counts, flag):
+        return rays.cross(
+            first, histories, offset, geometry, space.planes, *space.walls, spectrum, drive,
+            stream, counts, flag, EVENT_LIMIT, None,
         )  # fmt: skip
-        done = status == flights.DONE
-        return status, counts, ray_tallies.reduce(problem, counts, histories) if done else None
 
-    def straight(first, histories, offset, stream, flag):
-        counts = ray_tallies.empty_counts(problem)
+    def straight(first, histories, offset, stream, counts, flag):
         status = solve_straight(
-            first, histories, offset, problem.geometry, space.planes, problem.spectrum, drive,
-            counts, flag,
-        )  # fmt: skip
+            first, histories, offset, geometry, space.planes, spectrum, drive, counts, flag
+        )
         normalise(counts, space.oblique)
-        done = status == flights.DONE
-        return status, counts, ray_tallies.reduce(problem, counts, histories) if done else None
+        return status
 
-    space = problem.space
-    if space is None:
-        return one_dimension
-    drive = ray_tallies.drive_of(problem)
-    return straight if is_straight(problem) else directions
+    follow = one_dimension if space is None else straight if is_straight(problem) else directions
+
+    def run(first, histories, offset, stream, flag):
+        counts = module.empty_counts(problem)
+        status = follow(first, histories, offset, stream, counts, flag)
+        done = status == flights.DONE
+        return status, counts, module.reduce(problem, counts, histories) if done else None
+
+    return run
 
 
 def _lost_in(problem, batch, counts):
@@ -234,7 +237,7 @@ def too_many(history, batch, place_nm):
 
 def compile_for(problem):
     """Load or compile the variant of the kernels that a problem needs, without a history."""
-    stream = new_stream(0, 0) if problem.space is None else new_ray_stream(0, 0)
+    stream = stream_of(problem, 0, 0)
     flag = np.zeros(1, np.uint8)
     *_, sample = kernel_of(problem)(0, 0, np.uint64(0), stream, flag)
     if sample.field is not None:
