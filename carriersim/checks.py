@@ -15,6 +15,7 @@ from carriersim.reading import (
     MECHANISMS,
     SCATTERING,
     SIDES,
+    all_tables,
     exactly_one,
     exclusive,
     given,
@@ -301,7 +302,7 @@ def _outside(
 
 def _tables(document: Document) -> Iterator[Fault]:
     """Tables of energy wherever they stand: equal lengths, increasing energies, some modes."""
-    for path in _all_tables(document.data, ()):
+    for path in all_tables(document.data, ()):
         energies, values = document.get((*path, "energy_meV")), document.get((*path, "value"))
         if len(energies) != len(values):
             allowed = "as many values as energies"
@@ -319,19 +320,6 @@ def _tables(document: Document) -> Iterator[Fault]:
 
 def _is_zero(value: Any) -> bool:
     return isinstance(value, int | float) and value == 0
-
-
-def _all_tables(value: Any, path: KeyPath) -> Iterator[KeyPath]:
-    if isinstance(value, dict):
-        if isinstance(value.get("energy_meV"), list) and isinstance(value.get("value"), list):
-            yield path
-        for key, inner in value.items():
-            if isinstance(inner, dict | list):
-                yield from _all_tables(inner, (*path, key))
-    elif isinstance(value, list):
-        for index, inner in enumerate(value):
-            if isinstance(inner, dict | list):
-                yield from _all_tables(inner, (*path, index))
 
 
 def _mechanisms(document: Document) -> Iterator[Fault]:

@@ -5,6 +5,7 @@ Whatever has not the right type is skipped; validation.py refuses it.
 
 import math
 from collections.abc import Iterator
+from typing import Any
 
 from carriersim.faults import Fault, KeyPath
 from carriersim.yamlfile import Document
@@ -62,3 +63,17 @@ def relaxes(document: Document) -> bool:
     """Whether energies mix: a mechanism of relaxation or a coupled probe."""
     coupled = any(is_coupled(document, probe) for probe in mappings(document, ("probes",)))
     return coupled or any(mappings(document, MECHANISMS))
+
+
+def all_tables(value: Any, path: KeyPath) -> Iterator[KeyPath]:
+    """Key paths of the tables of energy anywhere in a value that stands at a path."""
+    if isinstance(value, dict):
+        if isinstance(value.get("energy_meV"), list) and isinstance(value.get("value"), list):
+            yield path
+        for key, inner in value.items():
+            if isinstance(inner, dict | list):
+                yield from all_tables(inner, (*path, key))
+    elif isinstance(value, list):
+        for index, inner in enumerate(value):
+            if isinstance(inner, dict | list):
+                yield from all_tables(inner, (*path, index))

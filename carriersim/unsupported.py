@@ -1,9 +1,8 @@
 """What the scenario file knows and this version does not compute yet."""
 
 from carriersim.faults import Fault, KeyPath
+from carriersim.reading import MECHANISMS, all_tables, mappings, relaxes
 from carriersim.yamlfile import Document
-
-_MECHANISMS: KeyPath = ("relaxation", "mechanisms")
 
 
 def refuse_unsupported(document: Document) -> list[Fault]:
@@ -25,40 +24,33 @@ def refuse_unsupported(document: Document) -> list[Fault]:
 def _with_directions(document: Document) -> list[Fault]:
     """Relaxation that needs more of the directions than this version keeps."""
     faults: list[Fault] = []
-    mechanisms = document.get(_MECHANISMS)
-    entries = mechanisms if isinstance(mechanisms, list) else []
-    kinds = [entry.get("kind") if isinstance(entry, dict) else None for entry in entries]
-    decide = "optical_phonon" in kinds or _has_tables(document.get(("scattering",)))
-    decide = decide or _has_tables(document.get(("contacts",)))
-    for index, (entry, kind) in enumerate(zip(entries, kinds, strict=True)):
+    entries = list(mappings(document, MECHANISMS))
+    phonons = any(document.get((*entry, "kind")) == "optical_phonon" for entry in entries)
+    decide = phonons or any(
+        any(all_tables(document.get(path), path)) for path in (("scattering",), ("contacts",))
+    )
+    for entry in entries:
+        kind, direction = (document.get((*entry, key)) for key in ("kind", "direction"))
         if kind not in ("bath", "carriers"):
             continue
-        direction = entry.get("direction")
-        path: KeyPath = (*_MECHANISMS, index, "direction")
         if direction == "kept" or (direction is None and kind == "carriers"):
-            if direction is None:
-                path = (*_MECHANISMS, index)
+            path = entry if direction is None else (*entry, "direction")
             why = "this version relaxes carriers that keep their direction in d = 1 only"
             faults.append(document.fault(path, "direction: randomised, or d = 1", why))
         elif kind == "carriers" and decide:
             why = "this version has carriers with phonons or tables of energy in d = 1 only"
-            faults.append(document.fault((*_MECHANISMS, index, "kind"), "bath, or d = 1", why))
-    return [*faults, *_driven_by_temperatures(document, decide and bool(entries))]
+            faults.append(document.fault((*entry, "kind"), "bath, or d = 1", why))
+    if decide and relaxes(document):
+        faults += _driven_by_temperatures(document)
+    return faults
 
 
-def _driven_by_temperatures(document: Document, decide: bool) -> list[Fault]:
+def _driven_by_temperatures(document: Document) -> list[Fault]:
     """The response to a bias about a state that unequal temperatures drive."""
-    left, right = (("contacts", side, "temperature_K") for side in ("left", "right"))
     common = document.get(("contacts", "temperature_K"))
-    own = [document.get(path) for path in (left, right)]
-    kelvin = [common if value is None else value for value in own]
-    if not decide or document.get(("contacts", "bias_mV")) != 0 or kelvin[0] == kelvin[1]:
+    own = [document.get(("contacts", side, "temperature_K")) for side in ("left", "right")]
+    left, right = (common if value is None else value for value in own)
+    if document.get(("contacts", "bias_mV")) != 0 or left == right:
         return []
     why = "this version has bias 0 between unequal temperatures with relaxation in d = 1 only"
     return [document.fault(("contacts", "bias_mV"), "a bias that is not 0, or d = 1", why)]
-
-
-def _has_tables(value: object) -> bool:
-    if isinstance(value, dict):
-        return "energy_meV" in value or any(_has_tables(inner) for inner in value.values())
-    return isinstance(value, list) and any(_has_tables(inner) for inner in value)

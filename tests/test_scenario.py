@@ -930,6 +930,15 @@ FAULTS = {
         ),
         "relaxation.mechanisms[0].kind: found 'carriers' (text); this version has carriers with",
     ),
+    "driven by temperatures past a coupled probe in d = 3": (
+        with_parts(
+            channel="{length_nm: 9, dimension: 3}",
+            contacts="{bias_mV: 0, temperature_K: 4, left: {temperature_K: 5}}",
+            scattering="{mean_free_path_nm: {energy_meV: [0, 1], value: [1, 2]}}",
+            probes="[{position_nm: 3, coupling: 0.5}]",
+        ),
+        "contacts.bias_mV: found 0; this version has bias 0 between unequal temperatures with",
+    ),
     "driven by temperatures in d = 3": (
         with_directions(
             "{kind: optical_phonon, path_nm: 5, energy_meV: 9}",

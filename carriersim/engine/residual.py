@@ -17,6 +17,7 @@ from carriersim.engine.mechanisms import (
     RANDOM_CARRIERS,
 )
 from carriersim.engine.planes import passes_tunnel
+from carriersim.engine.space import cosine_at
 
 FLOOR = 0.05  # of the mean strength, for every entry: r may vanish where it was looked at
 # Parts of a bin and of a cell where strengths are looked at.
@@ -255,12 +256,8 @@ def _cosines(count, dimension, crossing):
     if dimension == 1:
         return np.ones(count)
     share = (np.arange(count) + 0.5) / count
-    if dimension == 3:
-        result = np.sqrt(share) if crossing else share
-    else:
-        result = np.sqrt(1.0 - share**2) if crossing else np.cos(0.5 * np.pi * share)
     order = np.argsort(np.arange(1, count + 1) * 0.6180339887 % 1.0)
-    return result[order]
+    return cosine_at(share, dimension, crossing)[order]
 
 
 def cumulative(strength):

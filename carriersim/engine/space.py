@@ -16,6 +16,16 @@ LOOKUP = 64  # intervals of the cosine, to find the class of one quickly
 CLASSES = 18  # of direction, equal in angle, from the axis to across the channel
 
 
+def cosine_at(share, dimension, crossing):
+    """|u_x| below (d = 3) or above (d = 2) which a share of all directions of a half space lies.
+
+    crossing: of a flux by the cosine law instead. Even shares give even samples of either.
+    """
+    if dimension == 3:
+        return np.sqrt(share) if crossing else share
+    return np.sqrt(1.0 - share**2) if crossing else np.cos(0.5 * np.pi * share)
+
+
 @dataclass(frozen=True)
 class Space:
     """Planes and walls of a problem; V views of the angular distribution."""

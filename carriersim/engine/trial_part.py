@@ -10,6 +10,7 @@ from carriersim.engine.mechanisms import (
     RANDOM_BATH,
 )
 from carriersim.engine.residual import fermi, leaving, occupation
+from carriersim.engine.space import cosine_at
 from carriersim.engine.trial import number_and_energy
 
 _GAUSS = 0.5 - 0.5 / np.sqrt(3.0), 0.5 + 0.5 / np.sqrt(3.0)  # h is linear in a cell: h^2 exact
@@ -58,10 +59,7 @@ def _average(space, crossing):
     if space is None:
         return np.ones(1), np.ones(1)
     x, weight = np.polynomial.legendre.leggauss(24)
-    share, weight = 0.5 * (x + 1.0), 0.5 * weight
-    if space.dimension == 3:
-        return (np.sqrt(share) if crossing else share), weight
-    return (np.sqrt(1.0 - share**2) if crossing else np.cos(0.5 * np.pi * share)), weight
+    return cosine_at(0.5 * (x + 1.0), space.dimension, crossing), 0.5 * weight
 
 
 def _flux_classes(space):
